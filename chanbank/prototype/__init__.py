@@ -1,0 +1,1 @@
+"""The prototype lowpass: the object, one file per design method, length estimates."""

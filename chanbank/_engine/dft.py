@@ -1,0 +1,46 @@
+"""DFT plans: one place that chooses the planning effort, serialises planning and allocates."""
+
+import threading
+
+import numpy as np
+import pyfftw
+
+__all__ = ["BatchDft"]
+
+_PLANNING = threading.Lock()
+
+# Measured planning of long or awkward transforms takes seconds and gains little.
+_MEASURE_LIMIT = 1 << 14
+
+
+class BatchDft:
+    """One plan for `batch` rows of M points between two aligned buffers of its own.
+
+    kind "forward" (complex), "inverse" (complex, unnormalised) or "real" (real to half spectrum),
+    "real-inverse" (half spectrum to real, unnormalised).
+    """
+
+    def __init__(self, channels, batch, dtype, kind):
+        real_dtype = np.float32 if np.dtype(dtype) == np.complex64 else np.float64
+        half = channels // 2 + 1
+        with _PLANNING:
+            spectrum = half if kind in ("real", "real-inverse") else channels
+            wave = pyfftw.zeros_aligned(
+                (batch, channels), real_dtype if kind.startswith("real") else dtype, n=64
+            )
+            bins = pyfftw.zeros_aligned((batch, spectrum), dtype, n=64)
+            forward = kind in ("forward", "real")
+            source, target = (wave, bins) if forward else (bins, wave)
+            effort = "FFTW_MEASURE" if channels <= _MEASURE_LIMIT else "FFTW_ESTIMATE"
+            self._plan = pyfftw.FFTW(
+                source,
+                target,
+                axes=(1,),
+                direction="FFTW_FORWARD" if forward else "FFTW_BACKWARD",
+                flags=(effort, "FFTW_DESTROY_INPUT"),
+            )
+        source.fill(0)
+        self.source, self.target, self.batch = source, target, batch
+
+    def execute(self):
+        self._plan.execute()

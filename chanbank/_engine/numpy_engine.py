@@ -6,13 +6,12 @@ a DFT turns into a frame. Rows are added oldest first for every frame alike, and
 through one plan of fixed size, so the bits do not depend on how the stream is cut.
 """
 
-from concurrent.futures import ThreadPoolExecutor
-
 import numpy as np
 
 from chanbank._engine.convert import to_working
 from chanbank._engine.dft import BatchDft
 from chanbank._engine.rotor import Rotor, times
+from chanbank._engine.threads import Crew
 
 __all__ = ["NumpyAnalysisEngine"]
 
@@ -35,10 +34,7 @@ class NumpyAnalysisEngine:
         self.rotor = Rotor(spec.turn) if spec.turn else None
         self.batch = max(1, _BLOCK_SAMPLES // channels)
         kind = "forward" if self.complex_work else "real"
-        self.lanes = [
-            _Lane(channels, self.batch, spec.dtype, kind) for _ in range(max(1, spec.workers))
-        ]
-        self.pool = None
+        self.crew = Crew(lambda: _Member(channels, self.batch, spec.dtype, kind), spec.workers)
         self.reset(0, 1)
 
     def reset(self, first_sample, antennas):
@@ -106,24 +102,18 @@ class NumpyAnalysisEngine:
             for index in range(0, frames, self.batch)
         ]
 
-        def run(lane, mine):
+        def run(member, mine):
             for antenna, index, size in mine:
-                lane.frames(self, antenna, start + index * hop, first + index, size)
-                _deliver(self.spec, lane.dft.target[:size], out[antenna], written + index)
+                member.frames(self, antenna, start + index * hop, first + index, size)
+                _deliver(self.spec, member.dft.target[:size], out[antenna], written + index)
 
-        if len(self.lanes) == 1 or len(jobs) == 1:
-            run(self.lanes[0], jobs)
-        else:
-            if self.pool is None:
-                self.pool = ThreadPoolExecutor(len(self.lanes))
-            step = len(self.lanes)
-            list(self.pool.map(run, self.lanes, [jobs[i::step] for i in range(step)]))
+        self.crew.run(run, jobs)
         self.filled += count
         self.position += count
         return frames
 
 
-class _Lane:
+class _Member:
     """The buffers and the plan of one worker."""
 
     def __init__(self, channels, batch, dtype, kind):

@@ -49,13 +49,21 @@ class SynthesisSpec:
     frames lack the mixer's rotation, and the exponent is (t - delay - n*hop).
     """
 
-    taps: np.ndarray
-    channels: int
-    hop: int
-    dtype: np.dtype
-    real: bool
-    rotate: bool
-    turn: Fraction
-    delay: int
-    channel_major: bool
-    workers: int
+    taps: np.ndarray  # float64, length L, unpadded
+    channels: int  # M
+    hop: int  # D, 1..M
+    dtype: np.dtype  # complex64 or complex128: frames and arithmetic
+    real: bool  # real samples out
+    rotate: bool  # True: absolute phase; False: frame phase
+    turn: Fraction  # offset / M in cycles per sample, exact, 0 <= turn < 1
+    delay: int  # whole samples from the analysis input to this output
+    columns: np.ndarray | None  # DFT bins of the frames' columns; None: 0..M-1 (0..M//2 real)
+    column_weights: np.ndarray | None  # real with turn: 2 a mirrored pair, 1 a channel of its own
+    channel_major: bool  # frames come as (antennas, columns, frames)
+    workers: int  # threads
+
+    @property
+    def column_count(self):
+        if self.columns is not None:
+            return len(self.columns)
+        return self.channels // 2 + 1 if self.real and not self.turn else self.channels

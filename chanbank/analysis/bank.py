@@ -17,6 +17,7 @@ from chanbank._checks import (
     wrong_value,
 )
 from chanbank._engine import AnalysisSpec, make_analysis_engine
+from chanbank.analysis.arrays import bank_dtype, checked_out, flat_leading
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 
@@ -167,7 +168,8 @@ class AnalysisBank:
         plan = self.plan
         index = plan.dft_index
         columns = index if held["select"] is None else index[list(held["select"])]
-        if held["select"] is None and (not plan.real or plan.exact_offset == 0):
+        turn = (plan.exact_offset / plan.channels) % 1
+        if held["select"] is None and not (plan.real and turn):
             columns = None
         self._spec = AnalysisSpec(
             taps=self.prototype.taps,
@@ -176,7 +178,7 @@ class AnalysisBank:
             dtype=np.dtype(held["dtype"]),
             real=plan.real,
             rotate=held["phase"] == "absolute",
-            turn=(plan.exact_offset / plan.channels) % 1,
+            turn=turn,
             columns=columns,
             channel_major=held["layout"] == "channels",
             workers=held["workers"],
@@ -577,51 +579,6 @@ class AnalysisBank:
         self._build()
         self._lead, self._finished = state["lead"], state["finished"]
         self._engine.set_state(state["engine"])
-
-
-def bank_dtype(dtype):
-    """complex64 or complex128 as a NumPy dtype, or the exception that says so."""
-    try:
-        found = np.dtype(dtype)
-    except TypeError:
-        raise wrong_value("dtype", "complex64 or complex128", dtype) from None
-    if found not in (np.complex64, np.complex128) or not found.isnative:
-        raise wrong_value("dtype", "complex64 or complex128", dtype)
-    return found
-
-
-def checked_out(out, shape, dtype):
-    """`out`, or a new array where it is None; refused where it cannot hold the result as it is."""
-    if out is None:
-        return np.empty(shape, dtype)
-    if not isinstance(out, np.ndarray):
-        raise wrong_type("out", f"None or an array of shape {shape} and dtype {dtype.name}", out)
-    if out.dtype != dtype or out.shape != shape:
-        raise wrong_value("out", f"an array of shape {shape} and dtype {dtype.name}", out)
-    if not out.flags.c_contiguous or not out.flags.writeable:
-        state = "read-only" if not out.flags.writeable else f"strides {out.strides}"
-        raise ValueError(f"out must be C-contiguous and writable; got {state}")
-    return out
-
-
-def flat_leading(array, inner):
-    """The leading axes of a view as one axis, in front of `inner` others."""
-    lead = array.shape[: array.ndim - inner]
-    if len(lead) == 1:
-        return array
-    if not lead:
-        return array[None]
-    return _merged(array, inner)
-
-
-def _merged(array, inner):
-    # A slice along the frame axis of a contiguous array: its leading axes still merge into one.
-    lead = array.shape[: array.ndim - inner]
-    return np.lib.stride_tricks.as_strided(
-        array,
-        (math.prod(lead), *array.shape[array.ndim - inner :]),
-        array.strides[len(lead) - 1 :],
-    )
 
 
 def _checked_select(select, count):

@@ -164,15 +164,14 @@ class AnalysisBank:
 
     def _build(self):
         held = self._parameters
-        self.plan, self.prototype = held["plan"], held["prototype"]
-        plan = self.plan
+        plan = held["plan"]
         index = plan.dft_index
         columns = index if held["select"] is None else index[list(held["select"])]
         turn = (plan.exact_offset / plan.channels) % 1
         if held["select"] is None and not (plan.real and turn):
             columns = None
         self._spec = AnalysisSpec(
-            taps=self.prototype.taps,
+            taps=held["prototype"].taps,
             channels=plan.channels,
             hop=plan.hop,
             dtype=np.dtype(held["dtype"]),
@@ -185,6 +184,16 @@ class AnalysisBank:
         )
         self._engine = make_analysis_engine(self._spec)
         self._whole = None
+
+    @property
+    def plan(self):
+        """The channel plan."""
+        return self._parameters["plan"]
+
+    @property
+    def prototype(self):
+        """The prototype."""
+        return self._parameters["prototype"]
 
     @property
     def dtype(self):
@@ -526,9 +535,9 @@ class AnalysisBank:
     def _checked_samples(self, samples):
         """The samples as the engine takes them, how many there are, and their leading axes."""
         array = np.asarray(samples)
-        if array.ndim == 0:
-            raise wrong_value("samples", "an array whose last axis is time", samples)
         name = array.dtype.name
+        if array.ndim == 0 and array.dtype.kind in "iufc":
+            raise wrong_value("samples", "an array whose last axis is time", samples)
         real = self.plan.real
         if name in _INTEGER_ZERO:
             count = array.shape[-1]

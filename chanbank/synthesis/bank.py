@@ -160,8 +160,7 @@ class SynthesisBank:
 
     def _build(self):
         held = self._parameters
-        self.plan, self.prototype = held["plan"], held["prototype"]
-        plan = self.plan
+        plan = held["plan"]
         columns = weights = None
         turn = (plan.exact_offset / plan.channels) % 1
         if plan.real and turn:
@@ -170,7 +169,7 @@ class SynthesisBank:
             twice = 2 * plan.normalised_frequencies
             weights = np.where(twice == np.round(twice), 1.0, 2.0)
         self._spec = SynthesisSpec(
-            taps=self.prototype.taps,
+            taps=held["prototype"].taps,
             channels=plan.channels,
             hop=plan.hop,
             dtype=np.dtype(held["dtype"]),
@@ -185,6 +184,16 @@ class SynthesisBank:
         )
         self._engine = make_synthesis_engine(self._spec)
         self._whole = None
+
+    @property
+    def plan(self):
+        """The channel plan."""
+        return self._parameters["plan"]
+
+    @property
+    def prototype(self):
+        """The prototype."""
+        return self._parameters["prototype"]
 
     @property
     def dtype(self):

@@ -24,7 +24,8 @@ __all__ = ["SynthesisBank"]
 _FRAMES = OwnCheck(
     "an array (..., frames, channels) that the bank's dtype can hold",
     ("text", TypeError),
-    (3, ValueError),
+    (3, TypeError),
+    (np.ones(3), ValueError),
 )
 _OUT = OwnCheck("None or an array that fits the result", ("text", TypeError))
 _GAINS = OwnCheck(

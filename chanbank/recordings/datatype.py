@@ -144,7 +144,7 @@ class Datatype:
         Raises TypeError or ValueError where `samples` does not fit; see `SigMFWriter.write`.
         """
         samples = np.asarray(samples)
-        raw = self.integer and samples.dtype == self.native_dtype
+        raw = self.integer and samples.dtype.newbyteorder("=") == self.native_dtype
         kinds = "c" if self.complex else "f"
         if not raw and samples.dtype.kind not in kinds:
             accepted = f"an array of {'complex' if self.complex else 'real'} floats"

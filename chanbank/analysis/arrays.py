@@ -36,17 +36,13 @@ def checked_out(out, shape, dtype):
 
 def flat_leading(array, inner):
     """The leading axes of a view as one axis, in front of `inner` others."""
-    lead = array.shape[: array.ndim - inner]
-    if len(lead) == 1:
+    leading = array.ndim - inner
+    if leading == 1:
         return array
-    if not lead:
+    if leading == 0:
         return array[None]
-    return _merged(array, inner)
-
-
-def _merged(array, inner):
-    # A slice along the frame axis of a contiguous array: its leading axes still merge into one.
-    lead = array.shape[: array.ndim - inner]
+    # Also a slice along the frame axis of a contiguous array: its leading axes merge into one.
+    lead = array.shape[:leading]
     return np.lib.stride_tricks.as_strided(
         array,
         (math.prod(lead), *array.shape[array.ndim - inner :]),

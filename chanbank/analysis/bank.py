@@ -184,6 +184,19 @@ class AnalysisBank:
         )
         self._engine = make_analysis_engine(self._spec)
         self._whole = None
+        self._columns = self._spec.column_count
+        # Looked up at every push, so kept by dtype: the floats that need no conversion, and the
+        # zero level and scale of integers.
+        self._floats = {
+            np.dtype(name)
+            for name in ("float32", "float64", "complex64", "complex128")
+            if (name[0] == "f" or not plan.real)
+            and (name in ("float32", "complex64") or self._spec.dtype == np.complex128)
+        }
+        self._integers = {
+            np.dtype(name): (float(_INTEGER_ZERO[name]), 1.0 / (held["full_scale"] or full))
+            for name, full in _INTEGER_SCALE.items()
+        }
 
     @property
     def plan(self):
@@ -331,7 +344,7 @@ class AnalysisBank:
         self._refuse_finished()
         samples, count, lead = self._checked_samples(samples)
         self._refuse_other_lead(lead)
-        out = checked_out(out, self._shape(lead, self.frame_count(count)), self.dtype)
+        out = checked_out(out, self._shape(lead, self._frames_for(count)), self._spec.dtype)
         self._accept_lead(lead)
         self._run(self._engine.push, samples, out)
         return out
@@ -451,8 +464,7 @@ class AnalysisBank:
         --------
         See `reset`.
         """
-        hop, position = self.plan.hop, self._engine.position
-        return -(-(position + samples) // hop) - -(-position // hop)
+        return self._frames_for(samples)
 
     @checked(first=Integer(-(1 << 62), 1 << 62), count=Integer(0))
     def frame_times(self, first, count):
@@ -490,10 +502,14 @@ class AnalysisBank:
         low, stride = int(start * unit), int(step * unit)
         return np.array([(low + n * stride) / unit for n in range(count)], np.float64)
 
+    def _frames_for(self, samples):
+        hop, position = self._spec.hop, self._engine.position
+        return -(-(position + samples) // hop) - -(-position // hop)
+
     def _zeros(self, count, out):
         self._refuse_finished()
         lead = self._lead or ()
-        out = checked_out(out, self._shape(lead, self.frame_count(count)), self.dtype)
+        out = checked_out(out, self._shape(lead, self._frames_for(count)), self._spec.dtype)
         self._engine.push_zeros(count, flat_leading(out, 2))
         return out
 
@@ -515,7 +531,7 @@ class AnalysisBank:
             self._engine.reset(self._engine.position, math.prod(lead))
 
     def _shape(self, lead, frames):
-        columns = self._spec.column_count
+        columns = self._columns
         if self._spec.channel_major:
             return (*lead, columns, frames)
         return (*lead, frames, columns)
@@ -524,35 +540,36 @@ class AnalysisBank:
         return out[..., start:stop] if self._spec.channel_major else out[..., start:stop, :]
 
     def _run(self, push, samples, out):
-        lines = samples.reshape(math.prod(samples.shape[:-1]), samples.shape[-1])
-        name = samples.dtype.name
-        if name in _INTEGER_ZERO:
-            scale = 1.0 / (self.full_scale or _INTEGER_SCALE[name])
-            push(lines, flat_leading(out, 2), float(_INTEGER_ZERO[name]), scale)
-        else:
+        lines = flat_leading(samples, 1)
+        integers = self._integers.get(samples.dtype)
+        if integers is None:
             push(lines, flat_leading(out, 2))
+        else:
+            push(lines, flat_leading(out, 2), *integers)
 
     def _checked_samples(self, samples):
         """The samples as the engine takes them, how many there are, and their leading axes."""
-        array = np.asarray(samples)
-        name = array.dtype.name
-        if array.ndim == 0 and array.dtype.kind in "iufc":
+        array = samples if type(samples) is np.ndarray else np.asarray(samples)
+        kind = array.dtype
+        if array.ndim == 0 and kind.kind in "iufc":
             raise wrong_value("samples", "an array whose last axis is time", samples)
-        real = self.plan.real
-        if name in _INTEGER_ZERO:
-            count = array.shape[-1]
-            if not real and count % 2:
-                raise ValueError(
-                    f"samples of dtype {name} must be interleaved I/Q for a complex plan, an even "
-                    f"number along the last axis; got shape {array.shape}"
-                )
-            count = count if real else count // 2
-        else:
-            self._check_float(array)
-            count = array.shape[-1]
-        if not array.dtype.isnative or name in ("float16",):
-            array = array.astype("float32" if name == "float16" else array.dtype.newbyteorder("="))
-        return np.ascontiguousarray(array), count, array.shape[:-1]
+        if kind not in self._floats:
+            if kind in self._integers:
+                if not self.plan.real and array.shape[-1] % 2:
+                    raise ValueError(
+                        f"samples of dtype {kind.name} must be interleaved I/Q for a complex plan, "
+                        f"an even number along the last axis; got shape {array.shape}"
+                    )
+            else:
+                self._check_float(array)
+                wider = kind.newbyteorder("=")
+                array = array.astype("float32" if wider == np.float16 else wider)
+        if not array.flags.c_contiguous:
+            array = np.ascontiguousarray(array)
+        count = array.shape[-1]
+        if not self._spec.real and array.dtype in self._integers:
+            count //= 2
+        return array, count, array.shape[:-1]
 
     def _check_float(self, array):
         kind, name = array.dtype.kind, array.dtype.name

@@ -1,0 +1,131 @@
+"""What a measurement keeps: responses to tones, and leakage powers between channels."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+__all__ = ["MeasuredLeakage", "ToneResponse"]
+
+
+@dataclass(frozen=True)
+class ToneResponse:
+    """What one complex tone of amplitude 1 did to the banks that were tested.
+
+    Attributes
+    ----------
+    frequency : float
+        Cycles per sample from the recording's centre.
+    responses : numpy.ndarray
+        complex128, shape (output channels,): the mean over the steady frames of
+        y[n, k] exp(-2j pi (frequency - f_k) n D), which is H(frequency - f_k).
+    residuals : numpy.ndarray
+        float64, shape (output channels,): largest distance of a single frame from that.
+    frames : int
+        Frames averaged.
+    pair : numpy.ndarray or None
+        With a synthesis bank: complex128, shape (D,), what the tone was multiplied by at output
+        samples t with (t + pair delay) mod D = 0, 1 ...: the mean over the steady hops.
+    pair_residual : float or None
+        Largest distance of a single output sample from that.
+    """
+
+    frequency: float
+    responses: np.ndarray
+    residuals: np.ndarray
+    frames: int
+    pair: np.ndarray | None = None
+    pair_residual: float | None = None
+
+    def to_dict(self):
+        """JSON-safe; complex numbers as pairs of lists."""
+        return {
+            "frequency": self.frequency,
+            "frequency_unit": "cycles per sample",
+            "responses": _split(self.responses),
+            "residuals": self.residuals.tolist(),
+            "frames": self.frames,
+            "pair": None if self.pair is None else _split(self.pair),
+            "pair_residual": self.pair_residual,
+        }
+
+    @classmethod
+    def from_dict(cls, held):
+        """Rebuild what `to_dict` gave."""
+        return cls(
+            held["frequency"],
+            _joined(held["responses"]),
+            np.array(held["residuals"]),
+            held["frames"],
+            None if held["pair"] is None else _joined(held["pair"]),
+            held["pair_residual"],
+        )
+
+
+def _split(values):
+    return {"real": values.real.tolist(), "imag": values.imag.tolist()}
+
+
+def _joined(held):
+    return np.array(held["real"]) + 1j * np.array(held["imag"])
+
+
+class MeasuredLeakage:
+    """Measured power from every channel's occupied band in the outputs tested.
+
+    Attributes
+    ----------
+    outputs : numpy.ndarray
+        The channels tested, shape (K,).
+    powers : numpy.ndarray
+        P[row, j] as in `LeakageMatrix`, shape (K, channels); NaN for bands that were not run.
+    """
+
+    def __init__(self, outputs, powers):
+        self.outputs, self.powers = np.array(outputs), np.array(powers, float)
+
+    def power(self, outputs, inputs):
+        """P[k, j] for arrays of channels that broadcast together; `outputs` must be tested ones."""
+        rows = self._rows(np.asarray(outputs))
+        return self.powers[rows, np.asarray(inputs)]
+
+    def matrix_db(self, outputs=None, inputs=None):
+        """The matrix in dB, each row relative to the channel's own signal.
+
+        Parameters
+        ----------
+        outputs, inputs : sequence of int, optional
+            Rows (tested channels) and columns wanted; by default all there are.
+
+        Returns
+        -------
+        numpy.ndarray
+            float64, shape (outputs, inputs); NaN for bands that were not run.
+        """
+        outputs = self.outputs if outputs is None else np.asarray(outputs)
+        inputs = np.arange(self.powers.shape[1]) if inputs is None else np.asarray(inputs)
+        power = self.power(outputs[:, None], inputs[None, :])
+        own = self.power(outputs, outputs)
+        with np.errstate(divide="ignore"):
+            return 10 * np.log10(power / own[:, None])
+
+    def _rows(self, outputs):
+        order = np.argsort(self.outputs)
+        at = np.searchsorted(self.outputs, outputs, sorter=order)
+        rows = order[np.minimum(at, len(order) - 1)]
+        if (self.outputs[rows] != outputs).any():
+            raise ValueError(f"outputs must be channels tested, {self.outputs.tolist()}")
+        return rows
+
+    def to_dict(self):
+        """JSON-safe."""
+        return {
+            "kind": "dense",
+            "outputs": self.outputs.tolist(),
+            "powers": [[None if np.isnan(p) else p for p in row] for row in self.powers.tolist()],
+        }
+
+    @classmethod
+    def from_dict(cls, plan, held):
+        """Rebuild what `to_dict` gave."""
+        powers = [[np.nan if p is None else p for p in row] for row in held["powers"]]
+        return cls(held["outputs"], powers)

@@ -1,0 +1,308 @@
+"""The compiled run of one push: stage, fold, transform, deliver, block after block.
+
+A block of frames passes through buffers that stay in the second-level cache, and its results are
+written once. The whole push is one compiled call without the interpreter's lock: a loop over
+blocks in Python would cost a tenth of the time, and a small push would be mostly overhead.
+"""
+
+import hashlib
+from functools import cache
+from pathlib import Path
+
+import numpy as np
+from numba import carray, from_dtype, njit, types
+from numba.core import cgutils
+from numba.extending import intrinsic
+
+from chanbank._engine.emit import copy_bytes, copy_columns, rotate_row, transpose_frames, turn_row
+from chanbank._engine.fold import fold_columns
+from chanbank._engine.lanes import (
+    VECTOR_BYTES,
+    address_as_pointer,
+    fence,
+    lane_bytes,
+    make_variant,
+)
+from chanbank._engine.stage import exact_phase, stage_run
+
+__all__ = ["ANALYSIS", "analysis_run"]
+
+
+def _record(text, **special):
+    """A record of 64-bit words, from its names."""
+    return np.dtype([(name, special.get(name, np.int64)) for name in text.split()])
+
+
+# A bank: its geometry, its buffers' addresses, its plan.
+#   cycle: frames after which positions are whole rows apart; step: how many rows then
+#   block, gather, slot: frames folded, delivered and transformed at a time
+#   held: numbers per sample in the ring
+#   turned: rows in frame phase (0: none needed); columns: the chosen DFT points (0: all)
+#   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
+ANALYSIS = _record(
+    "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
+    " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
+    " execute plan mix_table mix_high mix_low hop_high hop_low",
+    mix_high=np.uint64,
+    mix_low=np.uint64,
+    hop_high=np.uint64,
+    hop_low=np.uint64,
+)
+
+# The operands of a run: words, but for `zero` and `scale`.
+_RUN = types.int64(*[types.int64] * 6, types.float64, types.float64, *[types.int64] * 8)
+
+
+@intrinsic
+def _execute(typingctx, function, plan, source, target):
+    """FFTW's new-array execution: thread-safe, and free of the interpreter."""
+
+    def codegen(context, builder, signature, args):
+        pointer = cgutils.voidptr_t
+        kind = cgutils.ir.FunctionType(cgutils.ir.VoidType(), [pointer] * 3)
+        call = builder.inttoptr(args[0], kind.as_pointer())
+        builder.call(call, [builder.inttoptr(value, pointer) for value in args[1:]])
+        return context.get_dummy_value()
+
+    return types.void(*[types.int64] * 4), codegen
+
+
+@intrinsic
+def _bank_at(typingctx, address):
+    """The record that describes a bank, at an address."""
+    record = from_dtype(ANALYSIS)
+
+    def codegen(context, builder, signature, args):
+        return builder.inttoptr(args[0], context.get_value_type(record))
+
+    return record(types.int64), codegen
+
+
+@njit(nogil=True, error_model="numpy")
+def _stage(variant, bank, table, samples, begin, end):
+    """Samples begin .. end - 1 (absolute) of a push into the ring.
+
+    `samples` is (code of the dtype, numbers per sample, address, absolute index of the first
+    sample, zero, scale), integers standing for (value - zero) * scale.
+    """
+    code, given, source, origin, zero, scale = samples
+    sample_bytes = bank.held * lane_bytes(variant)
+    mixer = (bank.mix_high, bank.mix_low, bank.mix_table)
+    rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
+    time = begin
+    while time < end:
+        row = time // bank.channels
+        column = time - row * bank.channels
+        count = min(bank.channels - column, end - time)
+        stage_run(
+            variant,
+            code,
+            rows[row % bank.ring_rows] + column * sample_bytes,
+            source,
+            time - origin,
+            count,
+            given,
+            bank.held,
+            zero,
+            scale,
+            mixer,
+            time,
+        )
+        time += count
+
+
+@njit(nogil=True, error_model="numpy")
+def _fold(variant, bank, table, first, count):
+    """Fold frames first .. first + count - 1, those that are whole rows apart together."""
+    sample_bytes = bank.held * lane_bytes(variant)
+    tap_bytes = lane_bytes(variant)
+    per_vector = VECTOR_BYTES // sample_bytes
+    for member in range(min(bank.cycle, count)):
+        frames = (count - member + bank.cycle - 1) // bank.cycle
+        newest = (first + member) * bank.hop
+        row = newest // bank.channels
+        split = newest - row * bank.channels + 1  # columns from here on belong to one row earlier
+        out = bank.folded + member * bank.folded_stride
+        stride = bank.cycle * bank.folded_stride
+        # Columns before the split, then those behind it: the last vector of the first part may
+        # run over the split, so the second part starts with a vector at the split itself and
+        # goes on aligned. Overlapping columns are computed twice, to the same bits.
+        oldest = (row - bank.rows + 1) % bank.ring_rows
+        taps = bank.taps + (bank.channels - split) * tap_bytes
+        vectors = -(-split // per_vector)
+        fold_columns(
+            variant,
+            table,
+            oldest,
+            bank.step,
+            taps,
+            bank.tap_stride,
+            bank.rows,
+            out,
+            stride,
+            frames,
+            0,
+            vectors,
+        )
+        oldest = (row - bank.rows) % bank.ring_rows
+        aligned = vectors * per_vector
+        if split < aligned and split < bank.channels:
+            fold_columns(
+                variant,
+                table,
+                oldest,
+                bank.step,
+                bank.taps,
+                bank.tap_stride,
+                bank.rows,
+                out,
+                stride,
+                frames,
+                split * sample_bytes,
+                1,
+            )
+        if aligned < bank.channels:
+            fold_columns(
+                variant,
+                table,
+                oldest,
+                bank.step,
+                bank.taps + (aligned - split) * tap_bytes,
+                bank.tap_stride,
+                bank.rows,
+                out,
+                stride,
+                frames,
+                aligned * sample_bytes,
+                -(-(bank.channels - aligned) // per_vector),
+            )
+
+
+@njit(nogil=True, error_model="numpy")
+def _transform(variant, bank, first, start, count):
+    """DFTs of `count` folded frames from row `start` of the block, which begins at `first`.
+
+    The plan always runs on a whole slot: one plan for every frame keeps the bits independent of
+    how many frames a push completes.
+    """
+    for slot in range(start, start + count, bank.slot):
+        source = bank.folded + slot * bank.folded_stride
+        if bank.turned != 0:
+            for index in range(slot, min(slot + bank.slot, start + count)):
+                frame = first + index
+                row = bank.turned + (index - slot) * bank.folded_stride
+                here = bank.folded + index * bank.folded_stride
+                origin = (frame * bank.hop) % bank.channels
+                count_floats = bank.channels * bank.held
+                rotate_row(variant, row, here, origin * bank.held, count_floats)
+                if bank.mix_table != 0:
+                    angle = exact_phase(bank.hop_high, bank.hop_low, frame)
+                    turn_row(variant, row, bank.channels, angle)
+            source = bank.turned
+        target = bank.bins + (slot - start) * bank.bins_stride
+        _execute(bank.execute, bank.plan, source, target)
+
+
+@njit(nogil=True, error_model="numpy")
+def _deliver(variant, bank, result, index, count):
+    """`count` transformed frames to the result, the first of them its frame `index`.
+
+    `result` is (address, bytes from frame to frame, bytes from column to column, whether to write
+    past the caches).
+    """
+    address, frame_stride, column_stride, stream = result
+    target = address + index * frame_stride
+    if bank.columns != 0:
+        for frame in range(count):
+            copy_columns(
+                variant,
+                target + frame * frame_stride,
+                column_stride,
+                bank.bins + frame * bank.bins_stride,
+                bank.columns,
+                bank.column_count,
+            )
+    elif bank.channel_major != 0:
+        transpose_frames(
+            variant,
+            target,
+            column_stride,
+            bank.bins,
+            bank.bins_stride,
+            count,
+            bank.column_count,
+            stream != 0,
+        )
+    else:
+        size = bank.column_count * 2 * lane_bytes(variant)
+        for frame in range(count):
+            source = bank.bins + frame * bank.bins_stride
+            copy_bytes(target + frame * frame_stride, source, size, stream != 0)
+
+
+@cache
+def analysis_run(lane, real, step):
+    """The compiled push for floats of `lane` bytes, real or complex samples, known row step.
+
+    It takes addresses and numbers only, so that one signature serves every array, and the
+    dispatcher's work is small against a small push. The digest of the kernels' sources is part of
+    the closure, and so of the key under which the compiled code is kept on disk: that cache by
+    itself watches this file alone.
+    """
+    sources = _digest()
+    real = int(real)
+
+    @njit(_RUN, nogil=True, error_model="numpy", cache=True)
+    def run(
+        bank_address,
+        table,
+        code,
+        given,
+        source,
+        origin,
+        zero,
+        scale,
+        target,
+        frame_stride,
+        column_stride,
+        stream,
+        begin,
+        end,
+        first,
+        last,
+    ):
+        """Take samples begin .. end - 1, deliver frames first .. last - 1.
+
+        `table` holds the addresses of the ring's rows, twice over; the operands from `code` on are
+        those of `_stage` and `_deliver`.
+        """
+        variant = make_variant(lane, real, step)
+        bank = _bank_at(bank_address)
+        samples = (code, given, source, origin, zero, scale)
+        result = (target, frame_stride, column_stride, stream)
+        time, frame = begin, first
+        while frame < last:
+            count = min(bank.block, last - frame)
+            newest = (frame + count - 1) * bank.hop + 1
+            _stage(variant, bank, table, samples, time, newest)
+            time = newest
+            _fold(variant, bank, table, frame, count)
+            for start in range(0, count, bank.gather):
+                size = min(bank.gather, count - start)
+                _transform(variant, bank, frame, start, size)
+                _deliver(variant, bank, result, frame + start - first, size)
+            frame += count
+        _stage(variant, bank, table, samples, time, end)
+        if stream != 0:
+            fence()
+        return sources
+
+    return run
+
+
+@cache
+def _digest():
+    here = Path(__file__).parent
+    names = ("lanes.py", "stage.py", "fold.py", "emit.py", "driver.py")
+    text = b"".join((here / name).read_bytes() for name in names)
+    return int(hashlib.sha256(text + bytes([VECTOR_BYTES])).hexdigest()[:12], 16)

@@ -1,0 +1,303 @@
+"""The analysis bank through the compiled run: buffers, plan and workers."""
+
+import math
+
+import numpy as np
+
+from chanbank._engine.driver import ANALYSIS, analysis_run
+from chanbank._engine.fftw import aligned_bytes, make_plan
+from chanbank._engine.lanes import VECTOR_BYTES
+from chanbank._engine.rotor import unit_circle
+from chanbank._engine.stage import FORMATS, MIX_BLOCK
+from chanbank._engine.threads import Crew
+
+__all__ = ["NumbaAnalysisEngine"]
+
+# Bytes of folded frames per block: with the ring beside them they stay in the second-level cache.
+_BLOCK_BYTES = 1 << 18
+
+# Samples per execution of the DFT plan, where frames are short: enough for its full speed, and
+# no more than a small push completes.
+_SLOT_SAMPLES = 1 << 12
+_SLOT_FRAMES = 32
+
+# Results of this many bytes are written past the caches; smaller ones may still be in them when
+# they are read.
+_STREAM_BYTES = 1 << 25
+
+
+# Samples that are worth waking another worker for.
+_WORKER_SAMPLES = 1 << 16
+
+
+class NumbaAnalysisEngine:
+    name = "numba"
+
+    def __init__(self, spec):
+        self.spec = spec
+        self.layout = layout = _Layout(spec)
+        step = layout.step if layout.step <= 3 else 0
+        self.run = analysis_run(layout.lane, not layout.paired, step)
+        self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
+        self.reset(0, 1)
+
+    def reset(self, first_sample, antennas):
+        self.position = first_sample
+        self.rings = [_Ring(self.layout) for _ in range(antennas)]
+        self.spare = []
+
+    def get_state(self):
+        """The position and the samples that later frames need, as the NumPy engine keeps them."""
+        count = self.layout.window - 1
+        held = np.empty((len(self.rings), count), self.layout.ring_dtype)
+        for ring, line in zip(self.rings, held, strict=True):
+            for part, place in self._history(ring):
+                line[part] = place
+        return self.position, held
+
+    def set_state(self, state):
+        position, held = state
+        self.reset(position, len(held))
+        for ring, line in zip(self.rings, held, strict=True):
+            for part, place in self._history(ring):
+                place[...] = line[part]
+
+    def _history(self, ring):
+        """The last window - 1 samples, as pairs (slice of them, view of the ring)."""
+        layout, channels = self.layout, self.spec.channels
+        first = time = self.position - layout.window + 1
+        while time < self.position:
+            row, column = divmod(time, channels)
+            count = min(channels - column, self.position - time)
+            place = ring.rows[row % layout.ring_rows, column : column + count]
+            yield slice(time - first, time - first + count), place
+            time += count
+
+    def push(self, samples, out, zero=0.0, scale=1.0):
+        """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`."""
+        kind = samples.dtype
+        numbers = samples.shape[1]
+        if kind.kind == "c":
+            given, count = 2, numbers
+        elif kind.kind == "f" or self.spec.real:
+            given, count = 1, numbers
+        else:
+            given, count = 2, numbers // 2
+        if not samples.flags.aligned:
+            samples = samples.copy()
+        source = samples.__array_interface__["data"][0]
+        form = (FORMATS[kind.name], given, source, zero, scale)
+        self._push(form, samples.strides[0], count, out)
+
+    def push_zeros(self, count, out):
+        """Take `count` zero samples; once the window holds only zeros, frames are zeros too."""
+        hop, layout = self.spec.hop, self.layout
+        busy = min(count, layout.window + self.spec.channels)
+        frames = -(-(self.position + busy) // hop) - -(-self.position // hop)
+        form = (FORMATS["zeros"], layout.held, 0, 0.0, 1.0)
+        self._push(form, 0, busy, out)
+        if count > busy:
+            self.reset(self.position + count - busy, len(self.rings))
+            rest = out[:, :, frames:] if self.spec.channel_major else out[:, frames:]
+            rest[...] = 0
+
+    def _push(self, form, stride, count, out):
+        code, given, source, zero, scale = form
+        origin = self.position
+        hop, end = self.spec.hop, origin + count
+        first, last = -(-origin // hop), -(-end // hop)
+        target = out.__array_interface__["data"][0]
+        apart, frame_stride, column_stride = out.strides
+        if self.spec.channel_major:
+            frame_stride, column_stride = column_stride, frame_stride
+        stream = out.nbytes >= _STREAM_BYTES and out.flags.aligned
+
+        def work(worker, jobs):
+            for antenna, ring, part in jobs:
+                self.run(
+                    worker.address,
+                    ring.address,
+                    code,
+                    given,
+                    source + antenna * stride,
+                    origin,
+                    zero,
+                    scale,
+                    target + antenna * apart + (part[2] - first) * frame_stride,
+                    frame_stride,
+                    column_stride,
+                    stream,
+                    *part,
+                )
+
+        if len(self.crew.members) == 1 or count * len(self.rings) < 2 * _WORKER_SAMPLES:
+            whole = (origin, end, first, last)
+            work(self.crew.members[0], [(a, ring, whole) for a, ring in enumerate(self.rings)])
+        else:
+            self.crew.run(work, self._jobs(origin, end, first, last))
+        self.position = end
+
+    def _jobs(self, origin, end, first, last):
+        """The push in parts for the workers: (antenna, ring, (begin, end, first, last)).
+
+        A part that starts within the push has a ring of its own, filled from the push itself, and
+        from the antenna's ring where its first window reaches back before the push. The last
+        part's ring carries the stream on.
+        """
+        hop, layout = self.spec.hop, self.layout
+        parts = -(-len(self.crew.members) // len(self.rings))
+        parts = max(1, min(parts, (end - origin) // _WORKER_SAMPLES, last - first))
+        marks = [first + (last - first) * part // parts for part in range(parts + 1)]
+        while len(self.spare) < (parts - 1) * len(self.rings):
+            self.spare.append(_Ring(layout))
+        jobs = []
+        for antenna, ring in enumerate(self.rings):
+            here = ring
+            for part in range(parts):
+                begin = origin
+                if part:
+                    here = self.spare.pop(0)
+                    start = marks[part] * hop - layout.window + 1
+                    begin = max(origin, start)
+                    if start < origin:
+                        here.memory[...] = ring.memory
+                stop = end if part == parts - 1 else (marks[part + 1] - 1) * hop + 1
+                jobs.append((antenna, here, (begin, stop, marks[part], marks[part + 1])))
+            used = [job[1] for job in jobs[-parts:]]
+            self.spare += used[:-1]
+            self.rings[antenna] = used[-1]
+        return jobs
+
+
+class _Layout:
+    """Sizes and constants of one bank, shared by its workers."""
+
+    def __init__(self, spec):
+        self.spec = spec
+        channels, hop = spec.channels, spec.hop
+        self.lane = np.dtype(spec.dtype).itemsize // 2
+        self.paired = not spec.real or spec.turn != 0
+        self.held = 2 if self.paired else 1
+        self.rows = -(-len(spec.taps) // channels)
+        self.window = self.rows * channels
+        self.ring_dtype = np.dtype(
+            spec.dtype if self.paired else (np.float32, np.float64)[self.lane // 8]
+        )
+        shared = math.gcd(channels, hop)
+        self.cycle, self.step = channels // shared, hop // shared
+        self.row_bytes = channels * self.held * self.lane
+        self.row_stride = _odd_lines(self.row_bytes)
+        bins = channels if self.paired else channels // 2 + 1
+        self.bins_stride = _odd_lines(bins * 2 * self.lane)
+        self.slot = max(1, min(_SLOT_SAMPLES // channels, _SLOT_FRAMES))
+        self.block = max(self.slot, _BLOCK_BYTES // self.row_bytes // self.slot * self.slot)
+        self.gather = self.block if spec.channel_major else self.slot
+        self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
+        self.plan = make_plan(
+            channels,
+            self.slot,
+            spec.dtype,
+            "forward" if self.paired else "real",
+            self.row_stride,
+            self.bins_stride,
+        )
+        self.taps, self.tap_stride = _tap_rows(spec.taps, self.rows, channels, self.lane)
+        self.columns = None if spec.columns is None else np.array(spec.columns, np.int64)
+        self.mixer = None
+        if spec.turn:
+            turn = spec.turn
+            table = unit_circle((turn.numerator * t for t in range(MIX_BLOCK)), turn.denominator)
+            self.mixer = table.astype(spec.dtype)
+
+
+class _Ring:
+    """The rows that hold one antenna's latest samples."""
+
+    def __init__(self, layout):
+        self.memory = aligned_bytes(layout.ring_rows * layout.row_stride)
+        lines = self.memory.reshape(layout.ring_rows, layout.row_stride)
+        self.rows = lines[:, : layout.row_bytes].view(layout.ring_dtype)
+        numbers = np.arange(2 * layout.ring_rows, dtype=np.int64) % layout.ring_rows
+        self.table = self.memory.ctypes.data + numbers * layout.row_stride
+        self.address = self.table.ctypes.data
+
+
+class _Worker:
+    """The buffers of one thread, and the record that describes them to compiled code."""
+
+    def __init__(self, layout):
+        spec = layout.spec
+        self.folded = aligned_bytes(
+            -(-layout.block // layout.slot) * layout.slot * layout.row_stride
+        )
+        self.bins = aligned_bytes(
+            -(-layout.gather // layout.slot) * layout.slot * layout.bins_stride
+        )
+        turned = not spec.rotate and spec.hop != spec.channels or layout.mixer is not None
+        self.turned = (
+            aligned_bytes(layout.slot * layout.row_stride) if turned and not spec.rotate else None
+        )
+        self.records = np.zeros(1, ANALYSIS)
+        self.address = self.records.ctypes.data
+        self.record = record = self.records[0]
+        for name, value in {
+            "channels": spec.channels,
+            "hop": spec.hop,
+            "rows": layout.rows,
+            "cycle": layout.cycle,
+            "step": layout.step,
+            "ring_rows": layout.ring_rows,
+            "block": layout.block,
+            "gather": layout.gather,
+            "slot": layout.slot,
+            "held": layout.held,
+            "rotate": spec.rotate,
+            "channel_major": spec.channel_major,
+            "column_count": spec.column_count,
+            "columns": _address(layout.columns),
+            "taps": _address(layout.taps),
+            "tap_stride": layout.tap_stride,
+            "folded": _address(self.folded),
+            "folded_stride": layout.row_stride,
+            "turned": _address(self.turned),
+            "bins": _address(self.bins),
+            "bins_stride": layout.bins_stride,
+            "execute": layout.plan.execute,
+            "plan": layout.plan.address,
+            "mix_table": _address(layout.mixer),
+        }.items():
+            record[name] = value
+        record["mix_high"], record["mix_low"] = _words(spec.turn)
+        # Frame phase takes the mixer's rotation back: exp(+2j pi turn n D).
+        record["hop_high"], record["hop_low"] = _words(spec.turn * spec.hop)
+
+
+def _address(array):
+    return 0 if array is None else array.ctypes.data
+
+
+def _words(turn):
+    """A turn modulo one in units of 2**-128, rounded, as two 64-bit words."""
+    units = round((turn % 1) * (1 << 128)) % (1 << 128)
+    return units >> 64, units & ((1 << 64) - 1)
+
+
+def _odd_lines(size):
+    """Room for `size` bytes and a vector's overrun, as an odd number of cache lines.
+
+    Rows that lie a power of two apart would all fall into the same few sets of the cache.
+    """
+    lines = -(-(size + VECTOR_BYTES) // 64)
+    return 64 * (lines | 1)
+
+
+def _tap_rows(taps, rows, channels, lane):
+    """The taps reversed in time, one row per branch tap, with room for a vector's overrun."""
+    kind = np.float32 if lane == 4 else np.float64
+    stride = _odd_lines(channels * lane)
+    memory = aligned_bytes(rows * stride)
+    padded = np.zeros(rows * channels)
+    padded[: len(taps)] = taps
+    table = memory.view(kind).reshape(rows, stride // lane)
+    table[:, :channels] = padded[::-1].reshape(rows, channels)
+    return memory, stride

@@ -1,12 +1,12 @@
 """Recordings: readers and writers, one file per container."""
 
-from .errors import RecordingError
-from .npy import NpyWriter
-from .open import open_recording
-from .recording import Recording
-from .segment import Annotation, Segment
-from .sigmf_write import write_sigmf
-from .sigmf_writer import SigMFWriter
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.npy import NpyWriter
+from chanbank.recordings.open import open_recording
+from chanbank.recordings.recording import Recording
+from chanbank.recordings.segment import Annotation, Segment
+from chanbank.recordings.sigmf_write import write_sigmf
+from chanbank.recordings.sigmf_writer import SigMFWriter
 
 __all__ = [
     "Annotation",

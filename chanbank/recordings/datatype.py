@@ -11,7 +11,7 @@ from functools import cached_property
 
 import numpy as np
 
-from .._checks import Rule, wrong_type, wrong_value
+from chanbank._checks import Rule, wrong_type, wrong_value
 
 __all__ = ["Datatype", "DatatypeRule"]
 

@@ -4,12 +4,21 @@ import os
 
 import numpy as np
 
-from .._checks import Boolean, Choice, Integer, OwnCheck, PathLike, checked, wrong_type, wrong_value
-from .datatype import Datatype
-from .errors import RecordingError
-from .recording import Recording
-from .source import Extent, SampleSource
-from .wholefile import PartFile, refuse_existing
+from chanbank._checks import (
+    Boolean,
+    Choice,
+    Integer,
+    OwnCheck,
+    PathLike,
+    checked,
+    wrong_type,
+    wrong_value,
+)
+from chanbank.recordings.datatype import Datatype
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.partfile import PartFile, refuse_place
+from chanbank.recordings.recording import Contents, Recording
+from chanbank.recordings.source import Extent, SampleSource
 
 __all__ = ["NpyWriter", "open_npy"]
 
@@ -77,12 +86,14 @@ def open_npy(path, request):
         count = found // frame_bytes
     source = SampleSource(path, datatype, streams, [Extent(0, count, position)], planar=planar)
     return Recording(
-        source,
-        "npy",
-        sample_rate=request.sample_rate,
-        center_frequency=request.center_frequency,
-        metadata={"shape": shape, "fortran_order": fortran, "descr": dtype.str},
-        truncated=truncated,
+        Contents(
+            source,
+            "npy",
+            sample_rate=request.sample_rate,
+            center_frequency=request.center_frequency,
+            metadata={"shape": shape, "fortran_order": fortran, "descr": dtype.str},
+            truncated=truncated,
+        )
     )
 
 
@@ -154,7 +165,7 @@ class NpyWriter:
 
     @checked(path=PathLike(), dtype=Choice(*_DTYPES), streams=Integer(1), overwrite=Boolean())
     def __init__(self, path, dtype, *, streams=1, overwrite=False):
-        refuse_existing(path, overwrite)
+        refuse_place(path, overwrite)
         self.path = path
         self._overwrite = overwrite
         self.streams = streams
@@ -171,7 +182,12 @@ class NpyWriter:
         samples=OwnCheck("an array of the writer's dtype", ("samples", TypeError)),
     )
     def write(self, samples):
-        """Append samples of shape (samples,), with several streams (streams, samples).
+        """Append samples.
+
+        Parameters
+        ----------
+        samples : array_like
+            Of the writer's dtype; shape (samples,), with several streams (streams, samples).
 
         Raises
         ------
@@ -179,6 +195,10 @@ class NpyWriter:
             If the dtype or shape is another one, or the writer is closed.
         OSError
             If the disk is full; the part written so far is removed.
+
+        Examples
+        --------
+        See the class.
         """
         if not self._open:
             raise ValueError(f"the writer of {self.path} is closed")
@@ -195,19 +215,29 @@ class NpyWriter:
         self.samples += samples.shape[-1]
 
     def close(self):
-        """Finish the header and put the file in place."""
+        """Finish the header and put the file in place.
+
+        Examples
+        --------
+        See the class, where the end of the ``with`` block closes it.
+        """
         if self._open:
             self._guarded(self._finish, self._header(self.samples))
             self._open = False
 
     def discard(self):
-        """Remove what was written."""
+        """Remove what was written; no file appears.
+
+        Examples
+        --------
+        See the class: an exception in the ``with`` block discards.
+        """
         if self._open:
             self._open = False
             self._file.discard()
 
     def _finish(self, header):
-        refuse_existing(self.path, self._overwrite)
+        refuse_place(self.path, self._overwrite)
         self._file.rewrite(0, header)
         self._file.publish()
 

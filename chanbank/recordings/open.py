@@ -3,7 +3,7 @@
 import os
 from types import SimpleNamespace
 
-from .._checks import (
+from chanbank._checks import (
     Boolean,
     Integer,
     Optional,
@@ -14,12 +14,12 @@ from .._checks import (
     checked,
     wrong_type,
 )
-from .datatype import Datatype, DatatypeRule
-from .errors import RecordingError
-from .npy import open_npy
-from .raw import open_raw
-from .sigmf_reader import is_archive, open_archive, open_pair
-from .wav import is_wav, open_wav
+from chanbank.recordings.datatype import Datatype, DatatypeRule
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.npy import open_npy
+from chanbank.recordings.raw import open_raw
+from chanbank.recordings.sigmf_reader import is_archive, open_archive, open_pair
+from chanbank.recordings.wav import is_wav, open_wav
 
 __all__ = ["open_recording"]
 

@@ -2,9 +2,9 @@
 
 import os
 
-from .errors import RecordingError
-from .recording import Recording
-from .source import Extent, SampleSource, whole_samples
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.recording import Contents, Recording
+from chanbank.recordings.source import Extent, SampleSource, whole_samples
 
 __all__ = ["open_raw"]
 
@@ -27,9 +27,11 @@ def open_raw(path, request):
     used = request.header_bytes + count * request.datatype.sample_bytes * streams
     source = SampleSource(path, request.datatype, streams, [Extent(0, count, request.header_bytes)])
     return Recording(
-        source,
-        "raw",
-        sample_rate=request.sample_rate,
-        center_frequency=request.center_frequency,
-        truncated=used < size,
+        Contents(
+            source,
+            "raw",
+            sample_rate=request.sample_rate,
+            center_frequency=request.center_frequency,
+            truncated=used < size,
+        )
     )

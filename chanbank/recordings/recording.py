@@ -2,14 +2,33 @@
 
 import copy
 import hashlib
+from dataclasses import dataclass, field
 
-from .._checks import Choice, Integer, Optional, checked, wrong_value
-from .errors import RecordingError
-from .segment import Segment
+from chanbank._checks import Choice, Instance, Integer, Optional, checked, wrong_value
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.segment import Segment
+from chanbank.recordings.source import SampleSource
 
-__all__ = ["Recording"]
+__all__ = ["Contents", "Recording"]
 
 _MILLION = 1 << 20
+
+
+@dataclass(frozen=True)
+class Contents:
+    """What a container's reader found, for `Recording` to show."""
+
+    source: SampleSource
+    container: str
+    path: str | None = None
+    sample_rate: float | None = None
+    center_frequency: float | None = None
+    first_sample: int = 0
+    segments: tuple = ()
+    annotations: tuple = ()
+    metadata: dict = field(default_factory=dict)
+    checksum: tuple | None = None  # file, position, size, expected SHA-512
+    truncated: bool = False
 
 
 class Recording:
@@ -31,6 +50,11 @@ class Recording:
     u16, i24                    complex64 or float32, full scale 1.0, every value exact
     i32, u32                    complex128 or float64, full scale 1.0, every value exact
     ==========================  =========================================================
+
+    Parameters
+    ----------
+    contents : object
+        What `open_recording` found in the file.
 
     Attributes
     ----------
@@ -59,39 +83,32 @@ class Recording:
         A copy of all that the container says, in its own words.
     truncated : bool
         Whether an incomplete end was accepted.
+    closed : bool
+        Whether it is closed.
+
+    Examples
+    --------
+    See `open_recording`.
     """
 
-    def __init__(
-        self,
-        source,
-        container,
-        *,
-        path=None,
-        sample_rate=None,
-        center_frequency=None,
-        first_sample=0,
-        segments=None,
-        annotations=(),
-        metadata=None,
-        checksum=None,
-        truncated=False,
-    ):
+    @checked(contents=Instance(Contents))
+    def __init__(self, contents):
+        source = contents.source
         self._source = source
-        self._checksum = checksum
-        self._metadata = {} if metadata is None else metadata
-        self.path = source.path if path is None else path
-        self.container = container
+        self._checksum = contents.checksum
+        self._metadata = contents.metadata
+        self.path = contents.path or source.path
+        self.container = contents.container
         self.datatype = source.datatype.name
         self.complex = source.datatype.complex
         self.streams = source.streams
         self.samples = source.samples
-        self.sample_rate = sample_rate
-        self.first_sample = first_sample
-        if segments is None:
-            segments = [Segment(0, self.samples, sample_rate, center_frequency)]
-        self.segments = tuple(segments)
-        self.annotations = tuple(annotations)
-        self.truncated = truncated
+        self.sample_rate = contents.sample_rate
+        self.first_sample = contents.first_sample
+        whole = Segment(0, self.samples, contents.sample_rate, contents.center_frequency)
+        self.segments = contents.segments or (whole,)
+        self.annotations = contents.annotations
+        self.truncated = contents.truncated
 
     @property
     def shape(self):
@@ -280,7 +297,12 @@ class Recording:
             )
 
     def close(self):
-        """Close the file; reading afterwards is an error, closing again is not."""
+        """Close the file; reading afterwards is an error, closing again is not.
+
+        Examples
+        --------
+        See `open_recording`, which closes it at the end of a ``with`` block.
+        """
         self._source.close()
 
     def __enter__(self):

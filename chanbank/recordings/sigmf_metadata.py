@@ -5,9 +5,9 @@ import functools
 import itertools
 import json
 
-from .._checks import wrong_type, wrong_value
-from .datatype import GRAMMAR, Datatype
-from .errors import RecordingError
+from chanbank._checks import wrong_type, wrong_value
+from chanbank.recordings.datatype import GRAMMAR, Datatype
+from chanbank.recordings.errors import RecordingError
 
 __all__ = [
     "NAMESPACE",

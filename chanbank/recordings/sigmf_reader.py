@@ -5,12 +5,12 @@ import os
 import tarfile
 from dataclasses import dataclass
 
-from .datatype import Datatype
-from .errors import RecordingError
-from .recording import Recording
-from .sigmf_metadata import parse_metadata
-from .sigmf_segments import annotations_of, layout_of, segments_of
-from .source import SampleSource
+from chanbank.recordings.datatype import Datatype
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.recording import Contents, Recording
+from chanbank.recordings.sigmf_metadata import parse_metadata
+from chanbank.recordings.sigmf_segments import annotations_of, layout_of, segments_of
+from chanbank.recordings.source import SampleSource
 
 __all__ = ["is_archive", "open_archive", "open_pair"]
 
@@ -129,16 +129,18 @@ def _recording(path, where, metadata, dataset, request):
     sha512 = top.get("core:sha512")
     source = SampleSource(dataset.path, datatype, streams, layout.extents)
     return Recording(
-        source,
-        "sigmf",
-        path=path,
-        sample_rate=rate,
-        first_sample=top.get("core:offset", 0),
-        segments=segments,
-        annotations=annotations_of(where, metadata, segments, layout.samples),
-        metadata=metadata,
-        checksum=sha512 and (dataset.path, dataset.position, dataset.found, sha512),
-        truncated=layout.truncated or dataset.found < dataset.expected,
+        Contents(
+            source,
+            "sigmf",
+            path=path,
+            sample_rate=rate,
+            first_sample=top.get("core:offset", 0),
+            segments=tuple(segments),
+            annotations=tuple(annotations_of(where, metadata, segments, layout.samples)),
+            metadata=metadata,
+            checksum=sha512 and (dataset.path, dataset.position, dataset.found, sha512),
+            truncated=layout.truncated or dataset.found < dataset.expected,
+        )
     )
 
 

@@ -6,10 +6,10 @@ from fractions import Fraction
 from itertools import accumulate
 from types import MappingProxyType
 
-from .errors import RecordingError
-from .segment import Annotation, Segment
-from .source import Extent, whole_samples
-from .timestamp import parse_instant, resolution
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.segment import Annotation, Segment
+from chanbank.recordings.source import Extent, whole_samples
+from chanbank.recordings.timestamp import parse_instant, resolution
 
 __all__ = ["annotations_of", "layout_of", "segments_of"]
 

@@ -2,10 +2,19 @@
 
 import numpy as np
 
-from .._checks import Boolean, Optional, OwnCheck, PathLike, Real, checked, wrong_type, wrong_value
-from .datatype import Datatype, DatatypeRule
-from .sigmf_writer import SigMFWriter
-from .timestamp import InstantRule
+from chanbank._checks import (
+    Boolean,
+    Optional,
+    OwnCheck,
+    PathLike,
+    Real,
+    checked,
+    wrong_type,
+    wrong_value,
+)
+from chanbank.recordings.datatype import Datatype, DatatypeRule
+from chanbank.recordings.sigmf_writer import SigMFWriter
+from chanbank.recordings.timestamp import InstantRule
 
 __all__ = ["write_sigmf"]
 

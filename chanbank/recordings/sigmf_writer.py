@@ -5,7 +5,7 @@ import hashlib
 import json
 import os
 
-from .._checks import (
+from chanbank._checks import (
     Boolean,
     Instance,
     Integer,
@@ -16,10 +16,16 @@ from .._checks import (
     Text,
     checked,
 )
-from .datatype import Datatype, DatatypeRule
-from .sigmf_metadata import entries, extension_rows, plain, schema_version, validate_metadata
-from .timestamp import InstantRule
-from .wholefile import PartFile, part_name, refuse_existing
+from chanbank.recordings.datatype import Datatype, DatatypeRule
+from chanbank.recordings.partfile import PartFile, part_name, refuse_place
+from chanbank.recordings.sigmf_metadata import (
+    entries,
+    extension_rows,
+    plain,
+    schema_version,
+    validate_metadata,
+)
+from chanbank.recordings.timestamp import InstantRule
 
 __all__ = ["SigMFWriter"]
 
@@ -64,6 +70,8 @@ class SigMFWriter:
     ----------
     samples, clipped : int
         Samples written so far in each stream; components clipped so far.
+    path, meta_path, data_path : str
+        The recording's name, and its two files.
 
     Raises
     ------
@@ -154,10 +162,10 @@ class SigMFWriter:
         self._open = True
 
     def _refuse_existing(self):
-        refuse_existing(self.meta_path, self._overwrite)
+        refuse_place(self.meta_path, self._overwrite)
         # Data without metadata, but beside a part of them, are what a crash left.
         orphan = not os.path.exists(self.meta_path) and os.path.exists(part_name(self.meta_path))
-        refuse_existing(self.data_path, self._overwrite or orphan)
+        refuse_place(self.data_path, self._overwrite or orphan)
 
     @property
     def meta_path(self):
@@ -169,8 +177,15 @@ class SigMFWriter:
 
     @checked(call=False, samples=OwnCheck("an array of samples", ("samples", TypeError)))
     def write(self, samples):
-        """Append samples of shape (samples,), with several streams (streams, samples).
+        """Append samples.
 
+        Parameters
+        ----------
+        samples : array_like
+            Shape (samples,), with several streams (streams, samples).
+
+        Notes
+        -----
         Complex datatypes take complex floats, real ones real floats; integer datatypes also take
         integers of exactly their own type, unscaled, complex ones interleaved I/Q along the last
         axis (what `Recording.read` returns).
@@ -182,6 +197,10 @@ class SigMFWriter:
             writer is closed.
         OSError
             If the disk is full; what was written so far is removed.
+
+        Examples
+        --------
+        See the class.
         """
         if not self._open:
             raise ValueError(f"the writer of {self.path} is closed")
@@ -207,10 +226,25 @@ class SigMFWriter:
 
         Before the first sample it takes the place of the capture that the constructor described.
 
+        Parameters
+        ----------
+        center_frequency : float, optional
+            In hertz.
+        datetime : str or datetime.datetime, optional
+            UTC instant of the next sample.
+        global_index : int, optional
+            Index of the next sample in the stream that was recorded, lost samples counted.
+        fields : dict, optional
+            Further entries, with their namespace.
+
         Raises
         ------
         TypeError, ValueError
             If an argument is not what is accepted, or the writer is closed.
+
+        Examples
+        --------
+        See the class.
         """
         if not self._open:
             raise ValueError(f"the writer of {self.path} is closed")
@@ -248,13 +282,30 @@ class SigMFWriter:
         comment=None,
         fields=None,
     ):
-        """Add a remark on samples start..start+length-1 (None: to the end of the capture).
+        """Add a remark on samples start..start+length-1.
+
+        Parameters
+        ----------
+        start : int
+            First sample.
+        length : int, optional
+            Number of samples; None: to the end of the capture.
+        lower_edge, upper_edge : float, optional
+            The band in hertz: absolute where the centre frequency is known, else relative to it.
+        label, comment : str, optional
+            A short and a long text.
+        fields : dict, optional
+            Further entries, with their namespace.
 
         Raises
         ------
         TypeError, ValueError
             If an argument is not what is accepted, one edge comes without the other, they are in
             the wrong order, or the writer is closed.
+
+        Examples
+        --------
+        See the class.
         """
         if not self._open:
             raise ValueError(f"the writer of {self.path} is closed")
@@ -293,6 +344,10 @@ class SigMFWriter:
             If the metadata are not valid by the standard's schema; nothing remains then.
         OSError
             If the disk is full; nothing remains then either.
+
+        Examples
+        --------
+        See the class, where the end of the ``with`` block closes it.
         """
         if not self._open:
             return
@@ -325,7 +380,12 @@ class SigMFWriter:
             raise
 
     def discard(self):
-        """Remove what was written; nothing appears under the recording's name."""
+        """Remove what was written; nothing appears under the recording's name.
+
+        Examples
+        --------
+        See the class: an exception in the ``with`` block discards.
+        """
         if self._open:
             self._open = False
             self._file.discard()

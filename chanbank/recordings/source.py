@@ -6,8 +6,8 @@ mapped file count as the process's own memory until the kernel takes them back.
 
 from dataclasses import dataclass
 
-from .datatype import Datatype
-from .errors import RecordingError
+from chanbank.recordings.datatype import Datatype
+from chanbank.recordings.errors import RecordingError
 
 __all__ = ["Extent", "SampleSource", "whole_samples"]
 

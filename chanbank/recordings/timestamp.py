@@ -4,7 +4,7 @@ import re
 from datetime import UTC, datetime, timedelta
 from fractions import Fraction
 
-from .._checks import Rule, wrong_type, wrong_value
+from chanbank._checks import Rule, wrong_type, wrong_value
 
 __all__ = ["InstantRule", "format_instant", "parse_instant", "resolution"]
 

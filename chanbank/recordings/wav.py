@@ -9,10 +9,10 @@ import struct
 import warnings
 from types import SimpleNamespace
 
-from .datatype import Datatype
-from .errors import RecordingError
-from .recording import Recording
-from .source import Extent, SampleSource, whole_samples
+from chanbank.recordings.datatype import Datatype
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.recording import Contents, Recording
+from chanbank.recordings.source import Extent, SampleSource, whole_samples
 
 __all__ = ["is_wav", "open_wav"]
 
@@ -45,12 +45,14 @@ def open_wav(path, request):
     count, truncated = _count(path, chunks, block_align, datatype, request.allow_truncated)
     source = SampleSource(path, datatype, streams, [Extent(0, count, chunks.position)])
     return Recording(
-        source,
-        "wav",
-        sample_rate=rate,
-        center_frequency=request.center_frequency,
-        metadata={"form": chunks.form, "chunks": chunks.seen, "channels": channels},
-        truncated=truncated,
+        Contents(
+            source,
+            "wav",
+            sample_rate=rate,
+            center_frequency=request.center_frequency,
+            metadata={"form": chunks.form, "chunks": chunks.seen, "channels": channels},
+            truncated=truncated,
+        )
     )
 
 

@@ -13,7 +13,7 @@ import pytest
 import sigmf
 
 from chanbank.recordings import RecordingError, SigMFWriter, open_recording, write_sigmf
-from chanbank.recordings.wholefile import PartFile
+from chanbank.recordings.partfile import PartFile
 
 FLOATS = ["cf32_le", "cf32_be", "cf64_le", "cf64_be", "rf32_le", "rf32_be", "rf64_le", "rf64_be"]
 INTEGERS = [
@@ -262,7 +262,7 @@ def test_nothing_is_overwritten_unless_asked(tmp_path):
     with open_recording(tmp_path / "quay", verify=True) as recording:
         assert recording.read().tolist() == [1, 1, 1]
     os.remove(tmp_path / "quay.sigmf-meta")
-    with pytest.raises(FileExistsError, match=r"quay\.sigmf-data exists"):
+    with pytest.raises(FileExistsError, match=r"quay\.sigmf-data. exists"):
         write_sigmf(tmp_path / "quay", np.ones(3))
 
 
@@ -349,5 +349,5 @@ def test_folders_without_permission(tmp_path):
 
 def test_a_folder_in_the_way(tmp_path):
     (tmp_path / "quay.sigmf-data").mkdir()
-    with pytest.raises(IsADirectoryError, match=r"quay\.sigmf-data is a folder"):
+    with pytest.raises(IsADirectoryError, match=r"quay\.sigmf-data. is a folder"):
         SigMFWriter(tmp_path / "quay", "ri8", overwrite=True)

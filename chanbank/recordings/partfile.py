@@ -1,9 +1,11 @@
-"""Files that appear whole or not at all."""
+"""Files that grow over many calls, and appear whole or not at all."""
 
 import contextlib
 import os
 
-__all__ = ["PartFile", "part_name", "refuse_existing"]
+from chanbank._files import refuse_existing
+
+__all__ = ["PartFile", "part_name", "refuse_place"]
 
 
 def part_name(path):
@@ -11,17 +13,16 @@ def part_name(path):
     return path + ".part"
 
 
-def refuse_existing(path, overwrite):
+def refuse_place(path, overwrite):
     """Raise before any work where `path` is taken or cannot be written."""
     if os.path.isdir(path):
-        raise IsADirectoryError(f"{path} is a folder; a file name is needed")
-    if os.path.exists(path) and not overwrite:
-        raise FileExistsError(f"{path} exists; pass overwrite=True to replace it")
+        raise IsADirectoryError(f"{path!r} is a folder; a file name is needed")
+    refuse_existing(path, overwrite)
     folder = os.path.dirname(path) or "."
     if not os.path.isdir(folder):
-        raise FileNotFoundError(f"{folder} is not a folder; create it before writing {path}")
+        raise FileNotFoundError(f"{folder!r} is not a folder; create it before writing {path!r}")
     if not os.access(folder, os.W_OK | os.X_OK):
-        raise PermissionError(f"{folder} is not writable; {path} cannot be created there")
+        raise PermissionError(f"{folder!r} is not writable; {path!r} cannot be created there")
 
 
 class PartFile:

@@ -7,7 +7,7 @@ squared magnitudes, never differences, so that a level 250 dB down keeps its dig
 import numpy as np
 import scipy.fft
 
-__all__ = ["Curve", "Response", "band_nodes", "comb", "scan_whole"]
+__all__ = ["Curve", "Response", "band_nodes", "comb", "complex_comb", "scan_whole"]
 
 # Complex numbers held at a time (16 bytes each): 64 MiB.
 _BLOCK = 1 << 22
@@ -17,7 +17,13 @@ _DENSITY = 8
 
 
 def comb(taps, channels, count, shifts):
-    """Blocks (first, values) of abs(H)^2 on combs: values[a, r] at shifts[a] + r * M / count.
+    """Blocks (first, values) of abs(H)^2 on combs, as `complex_comb`."""
+    for first, values in complex_comb(taps, channels, count, shifts):
+        yield first, values.real**2 + values.imag**2
+
+
+def complex_comb(taps, channels, count, shifts):
+    """Blocks (first, values) of H on combs: values[a, r] at shifts[a] + r * M / count.
 
     Tap i = p * count + m, so that H there is the DFT over m of exp(-2j pi s m / M) times a sum
     over p: one matrix product and one DFT of `count` points a shift.
@@ -27,15 +33,25 @@ def comb(taps, channels, count, shifts):
     padded = np.zeros(rows * count)
     padded[: len(taps)] = taps
     padded = padded.reshape(rows, count)
-    cycles = np.mod(shifts / channels, 1.0)
     step = max(1, _BLOCK // count)
     for first in range(0, len(shifts), step):
-        turn = cycles[first : first + step, None]
-        coarse = np.exp(-2j * np.pi * np.mod(turn * (np.arange(rows) * count), 1.0))
+        near = shifts[first : first + step]
+        coarse = _turns(near, channels, np.arange(rows) * count)
         folded = (coarse.real @ padded) + 1j * (coarse.imag @ padded)
-        folded *= np.exp(-2j * np.pi * np.mod(turn * np.arange(count), 1.0))
-        values = scipy.fft.fft(folded, axis=1, overwrite_x=True)
-        yield first, values.real**2 + values.imag**2
+        folded *= _turns(near, channels, np.arange(count))
+        yield first, scipy.fft.fft(folded, axis=1, overwrite_x=True)
+
+
+def _turns(frequencies, channels, taps):
+    """exp(-2j pi f i / M), the whole spacings of f reduced in integers.
+
+    Rounding then grows with the fraction of a spacing times i / M, some taps per branch, and not
+    with f i / M, which is thousands for a long prototype.
+    """
+    whole = np.rint(frequencies)
+    part = (frequencies - whole)[:, None]
+    steps = (np.mod(whole, channels).astype(np.int64)[:, None] * (taps % channels)) % channels
+    return np.exp(-2j * np.pi * (steps / channels + part * (taps / channels)))
 
 
 def band_nodes(taps, channels, low, high):
@@ -65,10 +81,10 @@ class Response:
         self._table = table.reshape(rows, self._step)
 
     def __call__(self, frequencies):
-        cycles = np.mod(np.asarray(frequencies, float) / self.channels, 1.0)[:, None]
+        frequencies = np.asarray(frequencies, float)
         rows, step = self._table.shape
-        coarse = np.exp(-2j * np.pi * np.mod(cycles * (np.arange(rows) * step), 1.0))
-        fine = np.exp(-2j * np.pi * np.mod(cycles * np.arange(step), 1.0))
+        coarse = _turns(frequencies, self.channels, np.arange(rows) * step)
+        fine = _turns(frequencies, self.channels, np.arange(step))
         real, imag = coarse.real @ self._table, coarse.imag @ self._table
         return np.einsum("fa,fa->f", real + 1j * imag, fine)
 

@@ -15,11 +15,13 @@ class ToneResponse:
     ----------
     frequency : float
         Cycles per sample from the recording's centre.
+    channels : numpy.ndarray
+        The output channels, int64.
     responses : numpy.ndarray
-        complex128, shape (output channels,): the mean over the steady frames of
+        complex128, shape (channels,): the mean over the steady frames of
         y[n, k] exp(-2j pi (frequency - f_k) n D), which is H(frequency - f_k).
     residuals : numpy.ndarray
-        float64, shape (output channels,): largest distance of a single frame from that.
+        float64, shape (channels,): largest distance of a single frame from that.
     frames : int
         Frames averaged.
     pair : numpy.ndarray or None
@@ -30,6 +32,7 @@ class ToneResponse:
     """
 
     frequency: float
+    channels: np.ndarray
     responses: np.ndarray
     residuals: np.ndarray
     frames: int
@@ -41,6 +44,7 @@ class ToneResponse:
         return {
             "frequency": self.frequency,
             "frequency_unit": "cycles per sample",
+            "channels": self.channels.tolist(),
             "responses": _split(self.responses),
             "residuals": self.residuals.tolist(),
             "frames": self.frames,
@@ -53,6 +57,7 @@ class ToneResponse:
         """Rebuild what `to_dict` gave."""
         return cls(
             held["frequency"],
+            np.array(held["channels"]),
             _joined(held["responses"]),
             np.array(held["residuals"]),
             held["frames"],

@@ -1,0 +1,118 @@
+"""Band-limited noise through an analysis bank, line by line.
+
+The noise is periodic: equal lines of random phase, T = N D samples to a period. Lines that fill
+1/D of the band fall in separate bins of N output frames, so one period gives every channel's
+response to each of them; D such runs cover the band, and sums over lines are powers of
+band-limited noise.
+"""
+
+import numpy as np
+import scipy.fft
+
+__all__ = ["Band", "Lines", "sweep", "sweep_size"]
+
+# Lines per lobe of the response (1/L wide), and per channel spacing at least.
+_PER_LOBE, _PER_SPACING = 32, 256
+
+
+def sweep_size(driver):
+    """Frames N in one period, so that T = N D lines are close enough."""
+    lines = max(_PER_LOBE * driver.length, _PER_SPACING * driver.channels)
+    return scipy.fft.next_fast_len(-(-lines // driver.hop))
+
+
+def sweep(driver, columns, blocks):
+    """Responses of some channels to all lines of some blocks.
+
+    Block r holds the lines m = r N .. (r + 1) N - 1 at m / T cycles per sample. Returns
+    complex128 (columns, T), NaN where no block was run.
+    """
+    size, hop = sweep_size(driver), driver.hop
+    period, skip = size * hop, driver.settle()
+    responses = np.full((len(columns), period), np.nan, np.complex128)
+    for block in blocks:
+        phases = np.exp(2j * np.pi * driver.rng.random(size))
+        spectrum = np.zeros(period, np.complex128)
+        spectrum[block * size : (block + 1) * size] = phases
+        # Unit power: the rounding of the bank then is at its floor for every line.
+        signal = scipy.fft.ifft(spectrum) * (period / np.sqrt(size))
+        fed = np.resize(signal, skip * hop + period)[None]
+        frames = driver.frames(fed, skip, size, columns)[0]
+        bins = scipy.fft.fft(frames, axis=0).T / np.sqrt(size)
+        # Frame n = skip + i starts the transform; bin b is line r N + b since r N n / N is whole.
+        late = np.exp(-2j * np.pi * ((np.arange(size) * skip) % size) / size)
+        responses[:, block * size : (block + 1) * size] = bins * (late / phases)
+    return responses
+
+
+class Band:
+    """Weights that integrate a function given on lines over an interval, linear in between."""
+
+    def __init__(self, low, high, period):
+        """From `low` to `high` in cycles per sample; line m sits at m / period."""
+        a, b = low * period, high * period
+        first, last = int(np.floor(a)), int(np.ceil(b))
+        self.lines = np.arange(first, last + 1)
+        weights = np.ones(len(self.lines))
+        # Ends at fractions of a step: integrals of the straight line between two lines.
+        head, tail = a - first, last - b
+        weights[0] = weights[-1] = 0.5
+        weights[0] -= head - head**2 / 2
+        weights[1] -= head**2 / 2
+        weights[-1] -= tail - tail**2 / 2
+        weights[-2] -= tail**2 / 2
+        self.weights = weights / period
+        self.lines %= period
+        self.head, self.tail = head, tail
+
+    def integral(self, values):
+        """Along the last axis of values over all lines."""
+        return values[..., self.lines] @ self.weights
+
+    def inside(self, values):
+        """Values at the two ends (interpolated in dB) and at the lines between, last axis."""
+        held = values[..., self.lines]
+        tiny = np.finfo(float).tiny
+        logs = np.log(np.maximum(held, tiny))
+        left = logs[..., 0] * (1 - self.head) + logs[..., 1] * self.head
+        right = logs[..., -1] * (1 - self.tail) + logs[..., -2] * self.tail
+        ends = np.exp(np.stack([left, right], axis=-1))
+        return np.concatenate([ends[..., :1], held[..., 1:-1], ends[..., 1:]], axis=-1)
+
+
+class Lines:
+    """Powers of the swept channels against frequency, and the questions put to them."""
+
+    def __init__(self, responses, driver, columns):
+        self.responses = responses
+        self.power = responses.real**2 + responses.imag**2
+        self.period = responses.shape[1]
+        self.fold = self.period // driver.hop
+        self.channels = driver.channels
+        self.centres = driver.plan.normalised_frequencies[driver.outputs[columns]]
+
+    def band(self, low, high):
+        """A `Band` between two frequencies in cycles per sample."""
+        return Band(low, high, self.period)
+
+    def shifted(self, row):
+        """Offsets from a channel's centre in spacings, increasing, and its powers there."""
+        lines = np.arange(self.period) / self.period
+        offset = (lines - self.centres[row] + 0.5) % 1.0 - 0.5
+        order = np.argsort(offset)
+        return offset[order] * self.channels, self.power[row, order]
+
+    def aliases(self, row):
+        """On all lines, the sum over r != 0 of the power at line + r N."""
+        folded = self.power[row].reshape(-1, self.fold)
+        total = np.empty_like(folded)
+        # Sums without the own line, not differences: prefix and suffix sums over r.
+        before = np.zeros(self.fold)
+        for r in range(len(folded)):
+            total[r] = before
+            before = before + folded[r]
+        after = np.zeros(self.fold)
+        for r in range(len(folded) - 1, -1, -1):
+            total[r] += after
+            after = after + folded[r]
+        return total.ravel()

@@ -42,6 +42,12 @@ class PartFile:
         while len(view):
             view = view[self._file.write(view) :]
 
+    def take(self, path):
+        """Go on with the file `path`, which changes its name instead of being copied."""
+        self._file.close()
+        os.replace(path, self.part)
+        self._file = open(self.part, "ab", buffering=0)  # noqa: SIM115 (closed as above)
+
     def rewrite(self, position, data):
         self._file.seek(position)
         self.write(data)

@@ -15,6 +15,7 @@ from chanbank._checks import (
     Real,
     Text,
     checked,
+    wrong_value,
 )
 from chanbank.recordings.datatype import Datatype, DatatypeRule
 from chanbank.recordings.partfile import PartFile, part_name, refuse_place
@@ -25,6 +26,7 @@ from chanbank.recordings.sigmf_metadata import (
     schema_version,
     validate_metadata,
 )
+from chanbank.recordings.source import whole_samples
 from chanbank.recordings.timestamp import InstantRule
 
 __all__ = ["SigMFWriter"]
@@ -63,6 +65,8 @@ class SigMFWriter:
         "receiver:gain").
     extensions : sequence of (name, version, optional), optional
         Namespaces beside ``core`` that are used.
+    checksum : bool, default True
+        Whether to state the SHA-512 of the samples (``core:sha512``).
     overwrite : bool, default False
         Whether a recording of that name may be replaced.
 
@@ -114,6 +118,7 @@ class SigMFWriter:
         extensions=OwnCheck(
             "pairs of name and version with a flag: (name, version, optional)", (3, TypeError)
         ),
+        checksum=Boolean(),
         overwrite=Boolean(),
     )
     def __init__(
@@ -130,6 +135,7 @@ class SigMFWriter:
         recorder=None,
         fields=None,
         extensions=(),
+        checksum=True,
         overwrite=False,
     ):
         stem = path
@@ -153,11 +159,11 @@ class SigMFWriter:
         }
         self._global = {key: value for key, value in self._global.items() if value is not None}
         self._captures, self._annotations = [], []
-        self._add_capture(center_frequency, datetime, None, None)
+        self._add_capture(0, center_frequency, datetime, None, None)
         validate_metadata(self.path, self._metadata())
         self._overwrite = overwrite
         self._refuse_existing()
-        self._digest = hashlib.sha512()
+        self._digest = hashlib.sha512() if checksum else None
         self._file = PartFile(self.data_path)
         self._open = True
 
@@ -211,23 +217,82 @@ class SigMFWriter:
         except BaseException:
             self.discard()
             raise
-        self._digest.update(data)
+        if self._digest is not None:
+            self._digest.update(data)
         self.samples += len(stored)
         self.clipped += clipped
 
+    @checked(path=PathLike())
+    def adopt(self, path):
+        """Make a raw file of samples in this datatype the recording's data, without copying.
+
+        The file is renamed and belongs to the writer from then on; it must lie in the same file
+        system. Nothing may have been written before.
+
+        Parameters
+        ----------
+        path : str or os.PathLike
+            File of interleaved samples, as this writer would have written them.
+
+        Raises
+        ------
+        ValueError
+            If samples were written already, or the writer is closed.
+        RecordingError
+            If the file ends in half a sample.
+        OSError
+            If the file is missing or cannot be renamed.
+
+        Examples
+        --------
+        >>> import numpy as np, os, tempfile
+        >>> from chanbank.recordings import open_recording
+        >>> with tempfile.TemporaryDirectory() as folder:
+        ...     raw = os.path.join(folder, "quay.bin")
+        ...     np.arange(6, dtype="<i2").tofile(raw)
+        ...     with SigMFWriter(os.path.join(folder, "quay"), "ci16_le") as writer:
+        ...         writer.adopt(raw)
+        ...     with open_recording(os.path.join(folder, "quay")) as recording:
+        ...         print(recording.read(), sorted(os.listdir(folder)))
+        [0 1 2 3 4 5] ['quay.sigmf-data', 'quay.sigmf-meta']
+        """
+        if not self._open:
+            raise ValueError(f"the writer of {self.path} is closed")
+        if self.samples:
+            raise ValueError(
+                f"path can be adopted before anything is written; {self.samples} samples were"
+            )
+        sample_bytes = self._datatype.sample_bytes * self.streams
+        samples = whole_samples(
+            path, os.path.getsize(path), sample_bytes, self._datatype.name, False
+        )
+        if self._digest is not None:
+            with open(path, "rb", buffering=0) as file:
+                while piece := file.read(1 << 20):
+                    self._digest.update(piece)
+        self._file.take(path)
+        self.samples = samples
+
     @checked(
+        start=Optional(Integer(0, 2**63 - 1)),
         center_frequency=Optional(Real(-1e12, 1e12, unit="hertz")),
         datetime=Optional(InstantRule()),
         global_index=Optional(Integer(0, 2**63 - 1)),
         fields=_FIELDS,
     )
-    def capture(self, *, center_frequency=None, datetime=None, global_index=None, fields=None):
-        """Start a new capture segment with the next sample; nothing carries over from the last.
+    def capture(
+        self, *, start=None, center_frequency=None, datetime=None, global_index=None, fields=None
+    ):
+        """Start a new capture segment; nothing carries over from the last.
 
-        Before the first sample it takes the place of the capture that the constructor described.
+        It takes the place of one that starts at the same sample, such as the first, which the
+        constructor described.
 
         Parameters
         ----------
+        start : int, optional
+            First sample of the segment, not before that of the last one; by default the next
+            sample to be written.
         center_frequency : float, optional
             In hertz.
         datetime : str or datetime.datetime, optional
@@ -248,17 +313,21 @@ class SigMFWriter:
         """
         if not self._open:
             raise ValueError(f"the writer of {self.path} is closed")
-        self._add_capture(center_frequency, datetime, global_index, fields)
+        last = self._captures[-1]["core:sample_start"]
+        start = self.samples if start is None else start
+        if start < last:
+            raise wrong_value("start", f"{last} (the last capture's) or more", start)
+        self._add_capture(start, center_frequency, datetime, global_index, fields)
 
-    def _add_capture(self, frequency, datetime, global_index, fields):
+    def _add_capture(self, start, frequency, datetime, global_index, fields):
         capture = {
-            "core:sample_start": self.samples,
+            "core:sample_start": start,
             "core:frequency": plain(frequency),
             "core:datetime": datetime,
             "core:global_index": global_index,
             **entries("fields", fields),
         }
-        if self._captures and self._captures[-1]["core:sample_start"] == self.samples:
+        if self._captures and self._captures[-1]["core:sample_start"] == start:
             self._captures.pop()
         self._captures.append({key: value for key, value in capture.items() if value is not None})
 
@@ -359,7 +428,8 @@ class SigMFWriter:
             raise
 
     def _finish(self):
-        self._global["core:sha512"] = self._digest.hexdigest()
+        if self._digest is not None:
+            self._global["core:sha512"] = self._digest.hexdigest()
         metadata = self._metadata()
         validate_metadata(self.meta_path, metadata)
         self._refuse_existing()

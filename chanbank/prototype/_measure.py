@@ -8,7 +8,14 @@ import scipy.fft
 
 from chanbank.prototype.prototype import _response
 
-__all__ = ["amplitude_grid", "band_extremes", "decibels", "local_peaks", "stopband_peak"]
+__all__ = [
+    "amplitude_grid",
+    "band_extremes",
+    "decibels",
+    "local_peaks",
+    "stopband_peak",
+    "stopband_ripples",
+]
 
 # Grid points per lobe of the response. A lobe is close to half a sine wave; the parabola through
 # its three highest points then misses the true peak by less than 1e-4 of it (0.001 dB).
@@ -40,13 +47,40 @@ def local_peaks(frequencies, amplitude):
     return frequencies[at] + shift * step, mid - 0.25 * (left - right) * shift
 
 
-def stopband_peak(taps, channels, edge):
-    """Largest abs(H) from `edge` (channel spacings) to half the sample rate, over abs(H(0))."""
-    frequencies, amplitude = amplitude_grid(taps, channels)
-    where, height = local_peaks(frequencies, amplitude)
-    beyond = height[where >= edge]
-    ends = np.abs(_response(taps, channels, np.array([edge, channels / 2])))
-    return float(max(beyond.max(initial=0.0), ends.max()) / abs(taps.sum()))
+def stopband_peak(taps, channels, edge, high=None, levels=None):
+    """Largest abs(H) from `edge` to `high` (default: half the sample rate), over abs(H(0)).
+
+    With `levels`, a function of frequency, the largest abs(H) / levels(f).
+    """
+    return float(stopband_ripples(taps, channels, edge, high, levels).max())
+
+
+def stopband_ripples(taps, channels, edge, high=None, levels=None, also=None):
+    """Heights of all peaks from `edge` to `high`, both ends included, over abs(H(0)).
+
+    `also` holds further frequencies to look at, such as inner band edges.
+    """
+    high = channels / 2 if high is None else min(high, channels / 2)
+    # The lobes next to the edge of a minimax design are narrow and want a grid of their own.
+    near = min(high, edge + 4 * channels / len(taps))
+    f = edge + (near - edge) * np.linspace(0, 1, 321) ** 2
+    close = np.abs(_response(taps, channels, f))
+    shape = np.ones_like(f) if levels is None else levels(f)
+    top = close / shape
+    at = np.flatnonzero((top[1:-1] >= top[:-2]) & (top[1:-1] > top[2:])) + 1
+    heights = [top[at], top[[0]]]
+    if near < high:
+        grid, amplitude = amplitude_grid(taps, channels)
+        where, height = local_peaks(grid, amplitude)
+        keep = (where > f[-2]) & (where <= high)
+        where, height = where[keep], height[keep]
+        ends = np.append(high, [] if also is None else also)
+        where = np.concatenate([where, ends])
+        height = np.concatenate([height, np.abs(_response(taps, channels, ends))])
+        heights.append(height if levels is None else height / levels(where))
+    else:
+        heights.append(top[[-1]])
+    return np.concatenate(heights) / abs(taps.sum())
 
 
 def band_extremes(taps, channels, low, high):

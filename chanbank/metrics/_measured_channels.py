@@ -276,14 +276,17 @@ class _Channels:
         yield "delay_spread", (*self._delay_spread(row, band), None)
 
     def _delay_spread(self, row, band):
-        """Slope of the phase over steps of eight lines: a compromise of rounding and detail."""
-        values = self.lines.responses[row, band.lines]
-        step = max(1, min(8, len(values) // 4))
-        turns = np.angle(values[step:] * values[:-step].conj())
+        """Spread of the slope of the phase over steps of two lines, the band's ends included."""
+        lines = np.arange(band.first - 1, band.first + len(band.lines) + 1) % self.lines.period
+        values = self.lines.responses[row, lines]
+        turns = np.angle(values[2:] * values[:-2].conj())
         # The bulk delay turns the phase many times: take the spread around the mean turn.
         mean = np.angle(np.exp(1j * turns).mean())
         around = np.angle(np.exp(1j * (turns - mean)))
-        slope = around * self.lines.period / (2 * np.pi * step)
+        slope = around * self.lines.period / (4 * np.pi)
+        # Slopes sit on band.lines, of which the first and last lie at or outside the ends.
+        slope[0] += band.head * (slope[1] - slope[0])
+        slope[-1] += band.tail * (slope[-2] - slope[-1])
         return float(np.ptp(slope)), ""
 
     def power_from(self, row, j):

@@ -3,6 +3,7 @@
 import numpy as np
 import scipy.fft
 
+from chanbank.metrics._sweep import Band
 from chanbank.metrics.figures import DEFINITIONS, Figure
 from chanbank.metrics.report import absent_figure
 from chanbank.metrics.system import SystemResponse
@@ -154,16 +155,23 @@ def frame_bounds(driver):
         answers = np.concatenate([answers, answers[..., paired].conj()], axis=-1)
     index = np.arange(count)
 
-    def extremes(cycles):
+    def blocks(cycles):
         turns = np.exp(-2j * np.pi * np.outer(cycles, index))
-        blocks = np.einsum("wn,pnk->wpk", turns, answers)
-        values = np.linalg.svd(blocks, compute_uv=False)
+        return np.einsum("wn,pnk->wpk", turns, answers)
+
+    def extremes(cycles):
+        values = np.linalg.svd(blocks(cycles), compute_uv=False)
         return values[:, -1] ** 2, values[:, 0] ** 2
 
+    # The scan by eigenvalues, six times as fast; singular values, which keep the digits of a
+    # small A, where it counts.
     grid = np.arange(8 * count) / (8 * count)
-    low, high = extremes(grid)
+    rough = [
+        np.linalg.eigvalsh(block @ block.conj().T)[[0, -1]] for w in grid for block in blocks([w])
+    ]
+    low, high = np.array(rough).T
     least, most, reach = grid[low.argmin()], grid[high.argmax()], 1 / (8 * count)
-    bounds = [low.min(), high.max()]
+    bounds = [np.inf, 0.0]
     for _ in range(3):
         across = np.linspace(-reach, reach, 9)
         low = extremes(least + across)[0]
@@ -208,10 +216,10 @@ def synthesis_stopband(driver, edge):
     drive = np.tile(np.abs(scipy.fft.fft(phases)) ** 2, hop)
     lines = np.abs(scipy.fft.fft(wave)) ** 2 / drive
     centre = driver.plan.normalised_frequencies[column]
-    offset = (np.arange(len(lines)) / len(lines) - centre + 0.5) % 1.0 - 0.5
-    offset *= driver.channels
-    reference = lines[np.abs(offset).argmin()]
-    level = lines[np.abs(offset) >= edge].max() / reference
+    reference = lines[round(centre * len(lines)) % len(lines)]
+    reach = edge / driver.channels
+    beyond = Band(centre + reach, centre + 1 - reach, len(lines))
+    level = beyond.inside(lines).max() / reference
     noise = min(1.0, driver.epsilon / np.sqrt(level))
     return Figure(
         DEFINITIONS[name], float(10 * np.log10(level)), {}, float(np.hypot(0.01, 8.7 * noise))

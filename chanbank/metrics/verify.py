@@ -11,10 +11,10 @@ from chanbank.metrics.figures import DEFINITIONS
 
 __all__ = ["ReportDisagreement", "Verification", "verify_reports"]
 
-# Rounding of one output is near eps (abs(H) + rms of H over channels): a fold of P products, a
-# DFT of log2 M stages whose error spreads over all channels, and taps rounded once. The mean over
-# frames shares what is systematic, single frames reach further; a pair adds both banks' share.
-# Largest seen over some thousands of banks and tones: 2.6, 4.1 and 7.3 of these units.
+# Rounding of one output is near eps (abs(H) + rms of H over channels + norm(h)): a fold of P
+# products, a DFT of log2 M stages whose error spreads over all channels, and taps rounded once.
+# The mean over frames shares what is systematic, single frames reach further; a pair adds both
+# banks' share.
 _MEAN_EPSILONS, _FRAME_EPSILONS, _PAIR_EPSILONS = 8.0, 16.0, 24.0
 
 # Group delays come from differences of phase: absolute slack in samples.
@@ -178,7 +178,8 @@ def _distance(name, unit, ours, theirs, tolerance, floor, report):
         epsilon = np.finfo(np.dtype(report.dtype)).eps
         slack = (_DELAY_SLACK + 64 * epsilon * report.prototype.length) * (unit in ("samples", "s"))
         slack = slack / report.plan.sample_rate if unit == "s" else slack
-        return np.abs(ours - theirs), 0.01 * scale + slack, unit
+        share = 0.01 if name.endswith("delay_spread") else 1e-4
+        return np.abs(ours - theirs), share * scale + slack, unit
     if unit == "dB":
         # A level, whichever sign it is quoted with, as an amplitude below 1.
         a, b = 10 ** (-np.abs(ours) / 20), 10 ** (-np.abs(theirs) / 20)
@@ -203,6 +204,8 @@ def _compare_tones(measured, known):
     """Responses of every tone in every channel and frame against the coefficients."""
     plan = known.plan
     epsilon = np.finfo(np.dtype(measured.dtype)).eps
+    taps = known.prototype.taps
+    spread = float(np.sqrt((taps**2).sum()))
     checks = {
         "tone responses": [0, 0.0, 1.0, ""],
         "tone frames": [0, 0.0, 1.0, ""],
@@ -223,10 +226,19 @@ def _compare_tones(measured, known):
         spacings = Fraction(tone.frequency) * plan.channels - plan.exact_offset
         nearest = round(spacings)
         shift = float(spacings - nearest)
-        every = next(complex_comb(known.prototype.taps, plan.channels, plan.channels, [shift]))[1]
+        every = next(complex_comb(taps, plan.channels, plan.channels, [shift]))[1]
         every = every[0]
         predicted = every[(nearest - index) % plan.channels]
-        scale = epsilon * (np.abs(predicted) + np.sqrt(np.mean(np.abs(every) ** 2)))
+        level = np.abs(predicted) + np.sqrt(np.mean(np.abs(every) ** 2)) + spread
+        if plan.real:
+            # A real tone brings its mirror image, which leaves only with cosine and sine together.
+            mirrored = -spacings - 2 * plan.exact_offset
+            turned = float(mirrored - round(mirrored))
+            other = next(complex_comb(taps, plan.channels, plan.channels, [turned]))[1][0]
+            level += np.abs(other[(round(mirrored) - index) % plan.channels])
+        # The prediction itself: phases of up to P turns in double precision.
+        own = 4 * np.finfo(float).eps * known.prototype.taps_per_branch * np.abs(taps).sum()
+        scale = epsilon * level + own / _MEAN_EPSILONS
 
         def place(at, tone=tone):
             return f"channel {int(tone.channels[at])}, tone {tone.frequency:.9g} cycles/sample"

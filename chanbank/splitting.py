@@ -201,7 +201,7 @@ def split_recording(
     ...             select=[2, 3], transients=False,
     ...         )
     ...     with open_recording(result.channels[1].path) as channel:
-    ...         print(channel.sample_rate, channel.center_frequency, abs(channel.read(0, 1)).round(6))
+    ...         print(channel.sample_rate, channel.center_frequency, abs(channel.read(0, 1)))
     4000.0 1012000.0 [0.25]
     >>> round(result.to_dict()["channels"][1]["mean_power_db"], 2)
     -12.04
@@ -223,7 +223,6 @@ def split_recording(
             bank,
             start=start,
             length=length,
-            transients=transients,
             burst_frames=burst_frames,
             block_frames=block_frames,
             progress=progress,
@@ -371,9 +370,9 @@ def _analyse(recording, bank, runs, rows, pieces, meter, progress):
             bar.update(count)
 
         for run in runs:
-            for _, frames in frames_of(recording, bank, run, on_samples):
+            for first, frames in frames_of(recording, bank, run, on_samples):
                 if meter is not None:
-                    meter.add(frames)
+                    meter.add(first, frames)
                 for position, row in enumerate(rows):
                     piece = frames[:, row]
                     peaks[position] = max(peaks[position], peak_of(piece))

@@ -8,7 +8,15 @@ from tqdm import tqdm
 from chanbank._checks import Boolean, Choice, Instance, Integer, Optional, Real, checked
 from chanbank.analysis.bank import AnalysisBank
 from chanbank.analysis.power import BlockPower
-from chanbank.analysis.runs import bank_for, check_fit, frames_of, plan_at, runs_of, stretch_of
+from chanbank.analysis.runs import (
+    bank_for,
+    check_fit,
+    frames_of,
+    plan_at,
+    runs_of,
+    settled,
+    stretch_of,
+)
 from chanbank.recordings.recording import Recording
 
 __all__ = ["Activity", "ActivityMeter", "decibels", "measure_activity"]
@@ -33,6 +41,8 @@ class Activity:
     and a peak, the largest such mean over a burst of `burst_frames` frames within it. The noise
     is estimated as the lower quartile over channels of the median over blocks of P, blocks of
     exactly zero power left out: up to three quarters of the channels may be busy all the time.
+    Frames whose prototype reaches beyond the samples of a segment count in no power, for the
+    edge spreads over all channels (they are taken where there are no others).
 
     Attributes
     ----------
@@ -40,9 +50,11 @@ class Activity:
         Channel indices, as ``plan.frequencies`` counts, shape (channels,).
     frequencies : numpy.ndarray
         Their centres in hertz, in the first segment measured.
-    times, durations : numpy.ndarray
+    times : numpy.ndarray
         Of each block, in seconds: the time that its first frame describes, counted in samples
-        of the file from the first one on, and how long it is. Shape (blocks,).
+        of the file from the first one on. Shape (blocks,).
+    frames : numpy.ndarray
+        Of each block, its number of frames. Shape (blocks,).
     power, peak : numpy.ndarray
         float32, shape (blocks, channels), full scale 1.0.
     burst_frames, block_frames : int
@@ -75,7 +87,7 @@ class Activity:
     channels: np.ndarray
     frequencies: np.ndarray
     times: np.ndarray
-    durations: np.ndarray
+    frames: np.ndarray
     power: np.ndarray
     peak: np.ndarray
     burst_frames: int
@@ -112,7 +124,7 @@ class Activity:
         --------
         See `measure_activity`.
         """
-        return self.durations @ self._above(threshold_db) / self.durations.sum()
+        return self.frames @ self._above(threshold_db) / self.frames.sum()
 
     @checked(threshold_db=Real(unit="decibels"))
     def active(self, threshold_db=10.0):
@@ -154,18 +166,35 @@ class ActivityMeter:
 
     def __init__(self, recording, bank, channels, runs, burst_frames, block_frames):
         self._plan, self._taps = bank.plan, bank.prototype.taps
-        self._delay, self._channels, self._runs = bank.delay, np.asarray(channels), runs
-        burst = min(burst_frames, max(run.frame_count for run in runs))
+        self._delay, self._channels = bank.delay, np.asarray(channels)
+        self._settled = [settled(run, bank) for run in runs]
+        if not any(stop > first for first, stop in self._settled):
+            self._settled = [(run.first_frame, run.first_frame + run.frame_count) for run in runs]
+        self._runs, self._at = runs, 0
+        counts = [max(0, stop - first) for first, stop in self._settled]
+        burst = min(burst_frames, max(counts))
         if block_frames is None:
-            frames = sum(run.frame_count for run in runs)
             blocks = max(8, _KEPT_VALUES // len(channels) - len(runs))
-            per_block = -(-frames // (burst * blocks))
+            per_block = -(-sum(counts) // (burst * blocks))
         else:
             per_block = -(-block_frames // burst)
         self.burst_frames, self.block_frames = burst, burst * per_block
-        self._power = BlockPower(len(channels), [run.frame_count for run in runs], burst, per_block)
+        self._power = BlockPower(len(channels), counts, burst, per_block)
         self._samples = 0
-        self.add, self.end_run = self._power.add, self._power.end_run
+
+    def add(self, first_frame, frames):
+        """Take frames of shape (streams, channels, frames), the next of the present run."""
+        first, stop = self._settled[self._at]
+        low = min(max(first - first_frame, 0), frames.shape[-1])
+        high = max(min(stop - first_frame, frames.shape[-1]), low)
+        self._power.add(frames[..., low:high])
+        for part in (frames[..., :low], frames[..., high:]):
+            self._power.count_nonfinite(part)
+
+    def end_run(self):
+        """Go on to the next run."""
+        self._power.end_run()
+        self._at += 1
 
     def see_samples(self, block, count):
         """Count the samples that are not finite."""
@@ -175,8 +204,8 @@ class ActivityMeter:
     def activity(self):
         held, plan = self._power, self._plan
         starts = []
-        for run in self._runs:
-            firsts = run.first_frame + np.arange(0, run.frame_count, self.block_frames)
+        for run, (first, stop) in zip(self._runs, self._settled, strict=True):
+            firsts = np.arange(first, stop, self.block_frames)
             starts.append(firsts * plan.hop - run.origin - self._delay + run.start)
         times = np.concatenate(starts) / plan.sample_rate
         mean = held.total / np.maximum(held.counted, 1)
@@ -187,7 +216,7 @@ class ActivityMeter:
             "channels": self._channels,
             "frequencies": frequencies[self._channels],
             "times": times,
-            "durations": held.frames / plan.channel_rate,
+            "frames": held.frames,
             "power": held.power,
             "peak": held.peak,
             "mean_power_db": decibels(mean),
@@ -225,7 +254,6 @@ def _noise(power):
     start=Real(0),
     length=Optional(Real(above=0)),
     unit=Choice("samples", "seconds"),
-    transients=Boolean(),
     burst_frames=Integer(1, 1 << 40),
     block_frames=Optional(Integer(1, 1 << 40)),
     progress=Boolean(),
@@ -237,7 +265,6 @@ def measure_activity(
     start=0,
     length=None,
     unit="samples",
-    transients=True,
     burst_frames=64,
     block_frames=None,
     progress=False,
@@ -256,8 +283,6 @@ def measure_activity(
         The stretch to measure, by default all.
     unit : {"samples", "seconds"}, default "samples"
         Of `start` and `length`; seconds are counted in samples of the file.
-    transients : bool, default True
-        Whether frames count whose prototype reaches beyond the samples there are.
     burst_frames : int, default 64
         Frames over which the peak power is averaged: a shorter burst is diluted. 64 independent
         frames of noise vary by 0.5 dB rms.
@@ -303,12 +328,12 @@ def measure_activity(
     >>> activity.active(10).tolist()
     [3]
     >>> float(activity.peak_power_db[3].round(1)), float(activity.duty(10)[3].round(3))
-    (-40.0, 0.024)
+    (-40.0, 0.016)
     """
     check_fit(recording, bank)
     start, length = stretch_of(recording, start, length, unit)
     channels = range(bank.plan.output_channels) if bank.select is None else bank.select
-    runs = runs_of(recording, bank, start, length, transients)
+    runs = runs_of(recording, bank, start, length, True)
     own = bank_for(bank, channels)
     meter = ActivityMeter(recording, bank, channels, runs, burst_frames, block_frames)
     total = sum(run.length for run in runs)
@@ -319,7 +344,7 @@ def measure_activity(
             bar.update(count)
 
         for run in runs:
-            for _, frames in frames_of(recording, own, run, on_samples):
-                meter.add(frames)
+            for first, frames in frames_of(recording, own, run, on_samples):
+                meter.add(first, frames)
             meter.end_run()
     return meter.activity()

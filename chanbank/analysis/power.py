@@ -57,6 +57,11 @@ class BlockPower:
                 self._take_bursts(sums, counts, step)
             at += step
 
+    def count_nonfinite(self, frames):
+        """Count the frames that are not finite among frames that shall not be measured."""
+        if not np.isfinite(frames.sum()):
+            self.nonfinite += np.count_nonzero(~np.isfinite(frames), axis=(0, 2))
+
     def end_run(self):
         """Close the blocks of a run."""
         if self._fill:

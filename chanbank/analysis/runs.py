@@ -1,6 +1,6 @@
 """A recording through a bank, one uninterrupted run of samples after the other."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
@@ -10,7 +10,16 @@ from chanbank.analysis.bank import AnalysisBank
 from chanbank.plan import ChannelPlan
 from chanbank.recordings.segment import Segment
 
-__all__ = ["Run", "bank_for", "check_fit", "frames_of", "plan_at", "runs_of", "stretch_of"]
+__all__ = [
+    "Run",
+    "bank_for",
+    "check_fit",
+    "frames_of",
+    "plan_at",
+    "runs_of",
+    "settled",
+    "stretch_of",
+]
 
 _BLOCK_BYTES = 32 << 20
 
@@ -110,21 +119,26 @@ def runs_of(recording, bank, start, length, transients):
         if low >= high:
             continue
         origin = segment.global_index + low - segment.start
-        first, stop = origin, origin + (high - low) + taps - 1
+        first, stop = -(-origin // hop), -(-(origin + high - low + taps - 1) // hop)
+        run = Run(segment, low, high - low, origin, first, stop - first)
         if not transients:
-            # Frames whose prototype lies on samples of the run alone.
-            first, stop = origin + taps - 1, origin + (high - low)
-        first_frame, stop_frame = -(-first // hop), -(-stop // hop)
-        if stop_frame > first_frame:
-            runs.append(
-                Run(segment, low, high - low, origin, first_frame, stop_frame - first_frame)
-            )
+            first, stop = settled(run, bank)
+            run = replace(run, first_frame=first, frame_count=stop - first)
+        if run.frame_count:
+            runs.append(run)
     if not runs:
         raise ValueError(
             f"transients=False leaves no frame: a prototype of {taps} taps fits into no run of "
             f"samples of this stretch ({length} samples)"
         )
     return runs
+
+
+def settled(run, bank):
+    """First and stop frame of those whose prototype lies on samples of the run alone."""
+    hop = bank.plan.hop
+    first = -(-(run.origin + bank.prototype.length - 1) // hop)
+    return first, max(first, -(-(run.origin + run.length) // hop))
 
 
 def bank_for(bank, channels):

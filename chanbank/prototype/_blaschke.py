@@ -15,8 +15,8 @@ describe a million taps. The dropped coefficients are of the order of delta^2 an
 With v = tanh(s/2), v^2 = (sin(ws/2)^2 - sin(w/2)^2) / cos(w/2)^2, a zero at v = u is the factor
 (u - v)/(u + v); g = u fs / sin(ws/2), about sqrt(fs^2 - f^2) for a zero at frequency f, hardly
 depends on M. K = 0 is the Dolph-Chebyshev array. Products of this kind solve weighted extremal
-problems in N. I. Achieser, Theory of Approximation, 1956, appendix A. A factor ((1 - b)/(1 - b z))^p, b > 0,
-makes the ripples fall off as
+problems in N. I. Achieser, Theory of Approximation, 1956, appendix A. A factor
+((1 - b)/(1 - b z))^p, b > 0, makes the ripples fall off as
 
     abs(G) = delta (S(fs)/S(f))^p,   S(f)^2 = sin(pi f/M)^2 + sinh(pi a/M)^2,
 

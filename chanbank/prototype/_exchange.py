@@ -76,7 +76,8 @@ def exchange(length, channels, bands):
                 return None
             # The proof: nowhere on the grid does the weighted error exceed that of the reference.
             error = weight * (target - _amplitude(found.taps, x) / shape)
-            return found if np.abs(error).max() <= found.delta * 1.01 + 1e-13 else None
+            limit = found.delta * 1.01 + 1e-14 * weight
+            return found if (np.abs(error) <= limit).all() else None
         at = chosen
     return None
 

@@ -21,7 +21,7 @@ from chanbank.recordings.recording import Recording
 
 __all__ = ["Activity", "ActivityMeter", "decibels", "measure_activity"]
 
-_KEPT_VALUES = 1 << 22  # block powers kept at most by default: 16 MiB, and as much for the peaks
+_KEPT_VALUES = 1 << 21  # block powers kept at most by default: 16 MiB, and as much for the peaks
 
 
 def decibels(power):
@@ -56,7 +56,7 @@ class Activity:
     frames : numpy.ndarray
         Of each block, its number of frames. Shape (blocks,).
     power, peak : numpy.ndarray
-        float32, shape (blocks, channels), full scale 1.0.
+        float64, shape (blocks, channels), full scale 1.0.
     burst_frames, block_frames : int
         Frames in a burst and in a block (the last block of a segment may be shorter).
     channel_rate : float
@@ -245,7 +245,7 @@ def _noise(power):
         part = part[:, np.isfinite(part).any(axis=0)]
         medians.append(np.nanmedian(part, axis=0) if part.size else np.zeros(0))
     medians = np.concatenate(medians)
-    return float(np.quantile(medians, 0.25)) if len(medians) else 0.0
+    return float(np.quantile(medians, 0.25, method="lower")) if len(medians) else 0.0
 
 
 @checked(
@@ -288,7 +288,7 @@ def measure_activity(
         frames of noise vary by 0.5 dB rms.
     block_frames : int, optional
         Frames in a block, rounded up to whole bursts. By default one burst, or as many as keep
-        the arrays below 2^22 values each, however long the recording.
+        the arrays below 2^21 values each, however long the recording.
     progress : bool, default False
         Show a progress bar.
 

@@ -10,14 +10,14 @@ class BlockPower:
 
     A burst is a short stretch of `burst_frames` frames; a block is `bursts_per_block` of them.
     Blocks and bursts start anew with each run. Frames that are not finite count nothing and are
-    counted by themselves. State: two float32 values for each channel and block.
+    counted by themselves. State: two float64 values for each channel and block.
     """
 
     def __init__(self, channels, run_frames, burst_frames, bursts_per_block):
         per_block = burst_frames * bursts_per_block
         blocks = sum(-(-frames // per_block) for frames in run_frames)
-        self.power = np.zeros((blocks, channels), np.float32)
-        self.peak = np.zeros((blocks, channels), np.float32)
+        self.power = np.zeros((blocks, channels))
+        self.peak = np.zeros((blocks, channels))
         self.frames = np.zeros(blocks, np.int64)
         self.total = np.zeros(channels)
         self.counted = np.zeros(channels)

@@ -14,8 +14,7 @@ from numba import carray, from_dtype, njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
-from chanbank._engine.emit import copy_bytes, copy_columns, rotate_row, transpose_frames, turn_row
-from chanbank._engine.fold import fold_columns
+from chanbank._engine.fold import fold_block
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
@@ -23,7 +22,9 @@ from chanbank._engine.lanes import (
     lane_bytes,
     make_variant,
 )
-from chanbank._engine.stage import exact_phase, stage_run
+from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
+from chanbank._engine.phase import exact_phase, rotate_row, turn_row
+from chanbank._engine.stage import NUMBER_BYTES, stage_run
 
 __all__ = ["ANALYSIS", "analysis_run"]
 
@@ -112,73 +113,6 @@ def _stage(variant, bank, table, samples, begin, end):
 
 
 @njit(nogil=True, error_model="numpy")
-def _fold(variant, bank, table, first, count):
-    """Fold frames first .. first + count - 1, those that are whole rows apart together."""
-    sample_bytes = bank.held * lane_bytes(variant)
-    tap_bytes = lane_bytes(variant)
-    per_vector = VECTOR_BYTES // sample_bytes
-    for member in range(min(bank.cycle, count)):
-        frames = (count - member + bank.cycle - 1) // bank.cycle
-        newest = (first + member) * bank.hop
-        row = newest // bank.channels
-        split = newest - row * bank.channels + 1  # columns from here on belong to one row earlier
-        out = bank.folded + member * bank.folded_stride
-        stride = bank.cycle * bank.folded_stride
-        # Columns before the split, then those behind it: the last vector of the first part may
-        # run over the split, so the second part starts with a vector at the split itself and
-        # goes on aligned. Overlapping columns are computed twice, to the same bits.
-        oldest = (row - bank.rows + 1) % bank.ring_rows
-        taps = bank.taps + (bank.channels - split) * tap_bytes
-        vectors = -(-split // per_vector)
-        fold_columns(
-            variant,
-            table,
-            oldest,
-            bank.step,
-            taps,
-            bank.tap_stride,
-            bank.rows,
-            out,
-            stride,
-            frames,
-            0,
-            vectors,
-        )
-        oldest = (row - bank.rows) % bank.ring_rows
-        aligned = vectors * per_vector
-        if split < aligned and split < bank.channels:
-            fold_columns(
-                variant,
-                table,
-                oldest,
-                bank.step,
-                bank.taps,
-                bank.tap_stride,
-                bank.rows,
-                out,
-                stride,
-                frames,
-                split * sample_bytes,
-                1,
-            )
-        if aligned < bank.channels:
-            fold_columns(
-                variant,
-                table,
-                oldest,
-                bank.step,
-                bank.taps + (aligned - split) * tap_bytes,
-                bank.tap_stride,
-                bank.rows,
-                out,
-                stride,
-                frames,
-                aligned * sample_bytes,
-                -(-(bank.channels - aligned) // per_vector),
-            )
-
-
-@njit(nogil=True, error_model="numpy")
 def _transform(variant, bank, first, start, count):
     """DFTs of `count` folded frames from row `start` of the block, which begins at `first`.
 
@@ -199,8 +133,7 @@ def _transform(variant, bank, first, start, count):
                     angle = exact_phase(bank.hop_high, bank.hop_low, frame)
                     turn_row(variant, row, bank.channels, angle)
             source = bank.turned
-        target = bank.bins + (slot - start) * bank.bins_stride
-        _execute(bank.execute, bank.plan, source, target)
+        _execute(bank.execute, bank.plan, source, bank.bins + (slot - start) * bank.bins_stride)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -280,13 +213,16 @@ def analysis_run(lane, real, step):
         bank = _bank_at(bank_address)
         samples = (code, given, source, origin, zero, scale)
         result = (target, frame_stride, column_stride, stream)
+        sample_bytes = given * NUMBER_BYTES[code]
         time, frame = begin, first
         while frame < last:
             count = min(bank.block, last - frame)
             newest = (frame + count - 1) * bank.hop + 1
             _stage(variant, bank, table, samples, time, newest)
             time = newest
-            _fold(variant, bank, table, frame, count)
+            ahead = source + (time - origin) * sample_bytes if code != 0 else 0
+            soon = ahead + min(bank.block * bank.hop, end - time) * sample_bytes
+            fold_block(variant, bank, table, frame, count, ahead, soon)
             for start in range(0, count, bank.gather):
                 size = min(bank.gather, count - start)
                 _transform(variant, bank, frame, start, size)
@@ -303,6 +239,6 @@ def analysis_run(lane, real, step):
 @cache
 def _digest():
     here = Path(__file__).parent
-    names = ("lanes.py", "stage.py", "fold.py", "emit.py", "driver.py")
+    names = ("lanes.py", "move.py", "phase.py", "stage.py", "fold.py", "driver.py")
     text = b"".join((here / name).read_bytes() for name in names)
     return int(hashlib.sha256(text + bytes([VECTOR_BYTES])).hexdigest()[:12], 16)

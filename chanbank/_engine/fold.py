@@ -14,37 +14,57 @@ from numba import njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
-from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, is_real
+from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes
 
-__all__ = ["fold_columns"]
+__all__ = ["fold_block"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
-# Vectors of a row that are folded for all frames before going on: P + 8 rows of this width and
-# their taps stay in the first-level cache.
-_TILE = 1024 // VECTOR_BYTES
+# Columns (in vectors) folded for all frames before going on: the rows' pieces and their taps stay
+# near, in the first-level cache for few frames and in the second for many.
+_TILE = 4096 // VECTOR_BYTES
+
+_HALF = VECTOR_BYTES // 2
+_LINE = 64  # bytes
 
 
 @intrinsic(prefer_literal=True)
 def _fold_group(
-    typingctx, variant, together, rows, column, step, taps, tap_stride, count, out, stride, vectors
+    typingctx,
+    variant,
+    together,
+    rows,
+    column,
+    step,
+    taps,
+    tap_stride,
+    count,
+    out,
+    stride,
+    vectors,
+    ahead,
 ):
     """out[f] = sum over p < count of row[p + f*step] * taps[p], f < together, oldest row first.
 
     `rows` is where the table holds the address of the oldest row, `column` the byte offset of the
-    first column in it; `taps` and `out` are addresses, `tap_stride` and `stride` bytes.
+    first column in it; `taps` and `out` are addresses, `tap_stride` and `stride` bytes. From
+    `ahead` on (0: none) one cache line per vector and frame is fetched into the second-level cache.
     """
     frames = together.literal_value
 
     def codegen(context, builder, signature, args):
-        _, _, rows, first_column, step, taps, tap_stride, count, out, stride, vectors = args
+        _, _, rows, first_column, step, taps, tap_stride, count, out, stride, vectors, ahead = args
         lanes = Lanes(builder, variant.lane)
         sums = [cgutils.alloca_once(builder, lanes.full) for _ in range(frames)]
         with cgutils.for_range(builder, vectors) as loop:
             along = lanes.times(loop.index, VECTOR_BYTES)
             tap = lanes.add(taps, along if variant.real else lanes.times(loop.index, _HALF))
             column = lanes.add(first_column, along)
+            with builder.if_then(builder.icmp_unsigned("!=", ahead, lanes.index(0))):
+                line = lanes.add(ahead, lanes.times(loop.index, frames * _LINE))
+                for frame in range(frames):
+                    lanes.prefetch(lanes.add(line, frame * _LINE))
             for total in sums:
                 builder.store(lanes.zero(), total)
             whole = _CHUNKS[0]
@@ -65,10 +85,7 @@ def _fold_group(
                 lanes.store(builder.load(total), place)
         return context.get_dummy_value()
 
-    return types.void(variant, together, *[types.int64] * 9), codegen
-
-
-_HALF = VECTOR_BYTES // 2
+    return types.void(variant, together, *[types.int64] * 10), codegen
 
 
 def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column, step):
@@ -110,44 +127,161 @@ def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column,
 
 
 @njit(nogil=True, error_model="numpy")
-def fold_columns(
-    variant, table, row, step, taps, tap_stride, count, out, stride, frames, column, vectors
-):
-    """Fold `vectors` vectors of columns for `frames` frames that lie `step` rows apart.
+def _fold_part(variant, bank, table, row, taps, out, frames, column, vectors, ahead):
+    """Fold `vectors` vectors of columns for `frames` frames that lie `bank.step` rows apart.
 
-    `column` is the byte offset of the first column within a row, `taps` the address of its oldest
-    tap; `table` holds the rows' addresses twice over, so that no index needs to wrap.
+    `row` is the first frame's oldest row, `column` the byte offset of the first column, `taps` the
+    address of its oldest tap, `out` of the first frame's result. Returns the next address to
+    prefetch (see `fold_block`).
     """
-    tap_bytes = VECTOR_BYTES if is_real(variant) else VECTOR_BYTES // 2
-    start = 0
-    while start < vectors:
-        width = min(_TILE, vectors - start)
-        offset = column + start * VECTOR_BYTES
-        tap = taps + start * tap_bytes
-        target = out + offset
-        frame = 0
-        while frame < frames:
-            rows = table + 8 * (row + frame * step)
-            here = target + frame * stride
-            left = frames - frame
-            if left >= 8:
-                _fold_group(
-                    variant, 8, rows, offset, step, tap, tap_stride, count, here, stride, width
+    step, tap_stride, count = bank.step, bank.tap_stride, bank.rows
+    stride = bank.cycle * bank.folded_stride
+    out += column
+    frame = 0
+    while frame < frames:
+        rows = table + 8 * (row + frame * step)
+        here = out + frame * stride
+        left = frames - frame
+        if left >= 8:
+            size = 8
+            _fold_group(
+                variant,
+                8,
+                rows,
+                column,
+                step,
+                taps,
+                tap_stride,
+                count,
+                here,
+                stride,
+                vectors,
+                ahead,
+            )
+        elif left >= 4:
+            size = 4
+            _fold_group(
+                variant,
+                4,
+                rows,
+                column,
+                step,
+                taps,
+                tap_stride,
+                count,
+                here,
+                stride,
+                vectors,
+                ahead,
+            )
+        elif left >= 2:
+            size = 2
+            _fold_group(
+                variant,
+                2,
+                rows,
+                column,
+                step,
+                taps,
+                tap_stride,
+                count,
+                here,
+                stride,
+                vectors,
+                ahead,
+            )
+        else:
+            size = 1
+            _fold_group(
+                variant,
+                1,
+                rows,
+                column,
+                step,
+                taps,
+                tap_stride,
+                count,
+                here,
+                stride,
+                vectors,
+                ahead,
+            )
+        frame += size
+        if ahead != 0:
+            ahead += vectors * size * _LINE
+    return ahead
+
+
+@njit(nogil=True, error_model="numpy")
+def fold_block(variant, bank, table, first, count, ahead, ahead_end):
+    """Fold frames first .. first + count - 1, those that are whole rows apart together.
+
+    While it computes it prefetches the samples of the next block, from `ahead` on (0: none), so
+    that staging them will not wait for memory.
+    """
+    sample_bytes = bank.held * lane_bytes(variant)
+    tap_bytes = lane_bytes(variant)
+    per_vector = VECTOR_BYTES // sample_bytes
+    tile = _TILE * per_vector
+    for start in range(0, bank.channels, tile):
+        stop = min(start + tile, bank.channels)
+        for member in range(min(bank.cycle, count)):
+            frames = (count - member + bank.cycle - 1) // bank.cycle
+            newest = (first + member) * bank.hop
+            row = newest // bank.channels
+            split = newest - row * bank.channels + 1
+            out = bank.folded + member * bank.folded_stride
+            if ahead >= ahead_end:
+                ahead = 0
+            # Columns before the split, then those behind it, which belong to one row earlier. The
+            # last vector of the first part may run over the split; the second part starts with a
+            # vector at the split itself and goes on aligned. Overlapping columns are computed
+            # twice, to the same bits.
+            if start < split:
+                oldest = (row - bank.rows + 1) % bank.ring_rows
+                taps = bank.taps + (bank.channels - split + start) * tap_bytes
+                vectors = -(-(min(split, stop) - start) // per_vector)
+                ahead = _fold_part(
+                    variant,
+                    bank,
+                    table,
+                    oldest,
+                    taps,
+                    out,
+                    frames,
+                    start * sample_bytes,
+                    vectors,
+                    ahead,
                 )
-                frame += 8
-            elif left >= 4:
-                _fold_group(
-                    variant, 4, rows, offset, step, tap, tap_stride, count, here, stride, width
-                )
-                frame += 4
-            elif left >= 2:
-                _fold_group(
-                    variant, 2, rows, offset, step, tap, tap_stride, count, here, stride, width
-                )
-                frame += 2
-            else:
-                _fold_group(
-                    variant, 1, rows, offset, step, tap, tap_stride, count, here, stride, width
-                )
-                frame += 1
-        start += width
+            if split < stop:
+                oldest = (row - bank.rows) % bank.ring_rows
+                aligned = -(-split // per_vector) * per_vector
+                if start < split < aligned:
+                    _fold_part(
+                        variant,
+                        bank,
+                        table,
+                        oldest,
+                        bank.taps,
+                        out,
+                        frames,
+                        split * sample_bytes,
+                        1,
+                        0,
+                    )
+                column = max(start, aligned)
+                if column < stop:
+                    taps = bank.taps + (column - split) * tap_bytes
+                    vectors = -(-(stop - column) // per_vector)
+                    ahead = _fold_part(
+                        variant,
+                        bank,
+                        table,
+                        oldest,
+                        taps,
+                        out,
+                        frames,
+                        column * sample_bytes,
+                        vectors,
+                        ahead,
+                    )

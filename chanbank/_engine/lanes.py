@@ -21,9 +21,11 @@ __all__ = [
     "Lanes",
     "Variant",
     "address_as_pointer",
+    "as_lane",
     "fence",
     "is_real",
     "lane_bytes",
+    "lane_type",
     "make_variant",
 ]
 
@@ -114,6 +116,30 @@ def fence(typingctx):
     return types.void(), codegen
 
 
+@intrinsic
+def lane_type(typingctx, variant):
+    """The float type of a variant, for arrays over its buffers."""
+
+    def codegen(context, builder, signature, args):
+        return context.get_dummy_value()
+
+    return types.DType(_lane(variant))(variant), codegen
+
+
+@intrinsic
+def as_lane(typingctx, variant, number):
+    """A number as a float of the variant's type, rounded once."""
+
+    def codegen(context, builder, signature, args):
+        return context.cast(builder, args[1], number, _lane(variant))
+
+    return _lane(variant)(variant, number), codegen
+
+
+def _lane(variant):
+    return types.float32 if variant.lane == 4 else types.float64
+
+
 class Lanes:
     """Writes the vector instructions of one kernel: `width` floats of `lane` bytes each."""
 
@@ -153,6 +179,15 @@ class Lanes:
         if stream:
             one = self.builder.module.add_metadata([ir.Constant(_LANE_INDEX, 1)])
             done.set_metadata("nontemporal", one)
+
+    def prefetch(self, address):
+        """Ask for a cache line, into the second-level cache."""
+        name = "llvm.prefetch.p0"
+        kind = ir.FunctionType(ir.VoidType(), [cgutils.voidptr_t, *[_LANE_INDEX] * 3])
+        function = cgutils.get_or_insert_function(self.builder.module, kind, name)
+        read, level, data = (ir.Constant(_LANE_INDEX, number) for number in (0, 2, 1))
+        pointer = self.builder.inttoptr(address, cgutils.voidptr_t)
+        self.builder.call(function, [pointer, read, level, data])
 
     def fma(self, left, right, addend):
         return self.builder.call(self._fma, [left, right, addend])

@@ -7,14 +7,12 @@ import numpy as np
 from chanbank._engine.driver import ANALYSIS, analysis_run
 from chanbank._engine.fftw import aligned_bytes, make_plan
 from chanbank._engine.lanes import VECTOR_BYTES
+from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
-from chanbank._engine.stage import FORMATS, MIX_BLOCK
+from chanbank._engine.stage import FORMATS
 from chanbank._engine.threads import Crew
 
 __all__ = ["NumbaAnalysisEngine"]
-
-# Bytes of folded frames per block: with the ring beside them they stay in the second-level cache.
-_BLOCK_BYTES = 1 << 18
 
 # Samples per execution of the DFT plan, where frames are short: enough for its full speed, and
 # no more than a small push completes.
@@ -190,7 +188,8 @@ class _Layout:
         bins = channels if self.paired else channels // 2 + 1
         self.bins_stride = _odd_lines(bins * 2 * self.lane)
         self.slot = max(1, min(_SLOT_SAMPLES // channels, _SLOT_FRAMES))
-        self.block = max(self.slot, _BLOCK_BYTES // self.row_bytes // self.slot * self.slot)
+        frames = _block_frames(self.row_bytes, self.cycle)
+        self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
         self.plan = make_plan(
@@ -233,7 +232,7 @@ class _Worker:
         self.bins = aligned_bytes(
             -(-layout.gather // layout.slot) * layout.slot * layout.bins_stride
         )
-        turned = not spec.rotate and spec.hop != spec.channels or layout.mixer is not None
+        turned = (not spec.rotate and spec.hop != spec.channels) or layout.mixer is not None
         self.turned = (
             aligned_bytes(layout.slot * layout.row_stride) if turned and not spec.rotate else None
         )
@@ -270,6 +269,20 @@ class _Worker:
         record["mix_high"], record["mix_low"] = _words(spec.turn)
         # Frame phase takes the mixer's rotation back: exp(+2j pi turn n D).
         record["hop_high"], record["hop_low"] = _words(spec.turn * spec.hop)
+
+
+def _block_frames(row_bytes, cycle):
+    """Frames to fold at a time.
+
+    A quarter of the second-level cache if that holds eight frames of every residue, which a row
+    of samples then serves at once. Long frames get more room, since rows that come from the third
+    level must serve several frames: eight of each residue within 2 MiB, four beyond, two at worst.
+    """
+    small, large, limit = (size // row_bytes for size in (1 << 18, 1 << 21, 1 << 22))
+    if 2 * cycle > limit:
+        return max(1, small)
+    wanted = min(8 * cycle, max(4 * cycle, large), limit)
+    return max(1, small, wanted)
 
 
 def _address(array):

@@ -1,11 +1,9 @@
-"""Delivery: frames from the DFT's cached output to where they belong, written once.
+"""Moves: samples and frames from buffer to buffer, and results to where they belong.
 
 A result much larger than the caches is written past them (non-temporal stores): an ordinary store
 would first read every line of memory that it is about to replace. Smaller results are written the
 ordinary way, since a reader will soon want them.
 """
-
-import math
 
 import numpy as np
 from llvmlite import ir
@@ -14,23 +12,22 @@ from numba.core import cgutils
 from numba.extending import intrinsic
 
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, address_as_pointer, lane_bytes
-from chanbank._engine.stage import as_lane, lane_type
 
-__all__ = ["copy_bytes", "copy_columns", "rotate_row", "transpose_frames", "turn_row"]
+__all__ = ["copy_bytes", "copy_columns", "transpose_frames"]
 
 
 @intrinsic(prefer_literal=True)
 def _copy_whole(typingctx, unit, stream, target, source, count):
-    """`count` units of 8 bytes or of one vector each; `stream` as in Lanes.store."""
+    """`count` units of 4 or 8 bytes or of one vector each; `stream` as in Lanes.store."""
     size, past = unit.literal_value, bool(stream.literal_value)
-    kind = INDEX if size == 8 else ir.VectorType(INDEX, size // 8)
+    kind = ir.IntType(8 * size) if size <= 8 else ir.VectorType(INDEX, size // 8)
 
     def codegen(context, builder, signature, args):
         _, _, target, source, count = args
         lanes = Lanes(builder, 4)
         with cgutils.for_range(builder, count) as loop:
             along = lanes.times(loop.index, size)
-            value = lanes.load(lanes.add(source, along), kind, 8)
+            value = lanes.load(lanes.add(source, along), kind, 4)
             lanes.store(value, lanes.add(target, along), align=size if past else 4, stream=past)
         return context.get_dummy_value()
 
@@ -39,7 +36,7 @@ def _copy_whole(typingctx, unit, stream, target, source, count):
 
 @njit(nogil=True, error_model="numpy")
 def copy_bytes(target, source, size, stream):
-    """`size` bytes, a multiple of 8, from a cached buffer to the result."""
+    """`size` bytes, a multiple of 4 (of 8 if `stream`); `stream` writes past the caches."""
     if stream:
         # Non-temporal vectors must be aligned; words fill the ends of the run, and the processor
         # joins them with their neighbours' words into whole lines.
@@ -54,6 +51,8 @@ def copy_bytes(target, source, size, stream):
         _copy_whole(VECTOR_BYTES, False, target, source, body)
         done = body * VECTOR_BYTES
         _copy_whole(8, False, target + done, source + done, (size - done) // 8)
+        if size % 8:
+            _copy_whole(4, False, target + size - 4, source + size - 4, 1)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -126,27 +125,3 @@ def transpose_frames(variant, target, stride, source, source_stride, frames, col
             here = target + column * stride + frame * size
             there = source + frame * source_stride + column * size
             _copy_whole(8, False, here, there, size // 8)
-
-
-@njit(nogil=True, error_model="numpy")
-def rotate_row(variant, target, source, first, count):
-    """target[i] = source[(i + first) % count], in floats."""
-    place = carray(address_as_pointer(target), (count,), lane_type(variant))
-    given = carray(address_as_pointer(source), (count,), lane_type(variant))
-    head, tail = given[first:], given[:first]
-    for i in range(count - first):
-        place[i] = head[i]
-    rest = place[count - first :]
-    for i in range(first):
-        rest[i] = tail[i]
-
-
-@njit(nogil=True, error_model="numpy")
-def turn_row(variant, row, count, angle):
-    """A row of `count` complex numbers times exp(1j angle), in place."""
-    place = carray(address_as_pointer(row), (2 * count,), lane_type(variant))
-    c, s = as_lane(variant, math.cos(angle)), as_lane(variant, math.sin(angle))
-    for i in range(count):
-        x, y = place[2 * i], place[2 * i + 1]
-        place[2 * i] = x * c - y * s
-        place[2 * i + 1] = x * s + y * c

@@ -26,7 +26,7 @@ from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
 from chanbank._engine.stage import NUMBER_BYTES, stage_run
 
-__all__ = ["ANALYSIS", "analysis_run"]
+__all__ = ["ANALYSIS", "analysis_run", "execute_plan"]
 
 
 def _record(text, **special):
@@ -55,7 +55,7 @@ _RUN = types.int64(*[types.int64] * 6, types.float64, types.float64, *[types.int
 
 
 @intrinsic
-def _execute(typingctx, function, plan, source, target):
+def execute_plan(typingctx, function, plan, source, target):
     """FFTW's new-array execution: thread-safe, and free of the interpreter."""
 
     def codegen(context, builder, signature, args):
@@ -133,7 +133,7 @@ def _transform(variant, bank, first, start, count):
                     angle = exact_phase(bank.hop_high, bank.hop_low, frame)
                     turn_row(variant, row, bank.channels, angle)
             source = bank.turned
-        _execute(bank.execute, bank.plan, source, bank.bins + (slot - start) * bank.bins_stride)
+        execute_plan(bank.execute, bank.plan, source, bank.bins + (slot - start) * bank.bins_stride)
 
 
 @njit(nogil=True, error_model="numpy")

@@ -165,22 +165,23 @@ def draw(path, banks, results, calls):
         title="What the skiff's channel hears",
         xlabel="offset from the channel's centre [kHz]",
         ylabel="response [dB]",
-        ylim=(-130, 5),
+        ylim=(-130, 25),
     )
     axes[1, 0].set(
         title="Spectrum in the skiff's channel",
         xlabel="offset [kHz]",
         ylabel="density [dB re full scale per hertz]",
+        ylim=(-160, -60),
     )
     axes[1, 1].set(
         title="The call after demodulation",
         xlabel="time [ms]",
         ylabel="deviation [kHz]",
-        ylim=(-6, 6),
+        ylim=(-6, 9),
     )
     for axis in axes.flat:
         axis.grid(alpha=0.3)
-        axis.legend(loc="upper right", fontsize="small")
+        axis.legend(loc="upper left", fontsize="small", ncols=3)
     figure.savefig(path, dpi=110)
 
 

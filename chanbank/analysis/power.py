@@ -41,7 +41,13 @@ class BlockPower:
         """Take frames of shape (streams, channels, frames)."""
         at, count = 0, frames.shape[-1]
         while at < count:
-            if self._fill or count - at < self._burst:
+            blocks = 0
+            if not self._fill and not self._bursts:
+                blocks = (count - at) // (self._burst * self._per_block)
+            if blocks:
+                step = blocks * self._burst * self._per_block
+                self._take_blocks(frames[..., at : at + step], blocks)
+            elif self._fill or count - at < self._burst:
                 step = min(self._burst - self._fill, count - at)
                 sums, counts = self._sums(frames[..., at : at + step], 1)
                 self._burst_sum += sums[:, 0]
@@ -50,7 +56,7 @@ class BlockPower:
                 if self._fill == self._burst:
                     self._close_burst()
             else:
-                # Whole bursts, to the end of the block at most, in one go.
+                # Whole bursts, to the end of the block at most.
                 bursts = min((count - at) // self._burst, self._per_block - self._bursts)
                 step = bursts * self._burst
                 sums, counts = self._sums(frames[..., at : at + step], bursts)
@@ -85,6 +91,21 @@ class BlockPower:
             np.maximum(self._strongest, means.max(axis=1), out=self._strongest)
         if self._bursts == self._per_block:
             self._close_block()
+
+    def _take_blocks(self, frames, blocks):
+        """Whole blocks in one go."""
+        channels = frames.shape[1]
+        sums, counts = self._sums(frames, blocks * self._per_block)
+        means = sums / np.maximum(counts, 1)
+        sums = sums.reshape(channels, blocks, -1).sum(axis=2)
+        counts = counts.reshape(channels, blocks, -1).sum(axis=2)
+        rows = slice(self._next, self._next + blocks)
+        self.power[rows] = (sums / np.maximum(counts, 1)).T
+        self.peak[rows] = means.reshape(channels, blocks, -1).max(axis=2).T
+        self.frames[rows] = self._burst * self._per_block
+        self.total += sums.sum(axis=1)
+        self.counted += counts.sum(axis=1)
+        self._next += blocks
 
     def _close_block(self):
         self.power[self._next] = self._sum / np.maximum(self._count, 1)

@@ -1,15 +1,71 @@
 """Split wideband captures into channels, prove what each leaks, and put the band back together."""
 
+from chanbank.analysis.activity import Activity, measure_activity
 from chanbank.analysis.bank import AnalysisBank
+from chanbank.analysis.summary import ChannelRecording, SplitResult
+from chanbank.metrics.compare import compare_reports
+from chanbank.metrics.formula import bank_report
+from chanbank.metrics.limits import Limits
+from chanbank.metrics.measured import measured_report
+from chanbank.metrics.report import BankReport
+from chanbank.metrics.verify import ReportDisagreement
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.boxcar import boxcar_prototype
+from chanbank.prototype.energy import energy_prototype
+from chanbank.prototype.equiripple import equiripple_prototype
+from chanbank.prototype.kaiser import kaiser_prototype
+from chanbank.prototype.lengths import length_estimates
+from chanbank.prototype.nyquist import nyquist_prototype
 from chanbank.prototype.prototype import Prototype
+from chanbank.prototype.tight import tight_prototype
+from chanbank.prototype.window import window_prototype
+from chanbank.recordings.errors import RecordingError
+from chanbank.recordings.npy import NpyWriter
+from chanbank.recordings.open import open_recording
+from chanbank.recordings.recording import Recording
+from chanbank.recordings.segment import Annotation, Segment
+from chanbank.recordings.sigmf_write import write_sigmf
+from chanbank.recordings.sigmf_writer import SigMFWriter
+from chanbank.splitting import split_recording
 from chanbank.synthesis.bank import SynthesisBank
+from chanbank.synthesis.dual import dual_prototype
+from chanbank.synthesis.frames import FrameBounds, frame_bounds
+from chanbank.synthesis.pair import prototype_pair
 
 __all__ = [
+    "Activity",
     "AnalysisBank",
+    "Annotation",
+    "BankReport",
     "ChannelPlan",
+    "ChannelRecording",
+    "FrameBounds",
+    "Limits",
+    "NpyWriter",
     "Prototype",
+    "Recording",
+    "RecordingError",
+    "ReportDisagreement",
+    "Segment",
+    "SigMFWriter",
+    "SplitResult",
     "SynthesisBank",
+    "bank_report",
     "boxcar_prototype",
+    "compare_reports",
+    "dual_prototype",
+    "energy_prototype",
+    "equiripple_prototype",
+    "frame_bounds",
+    "kaiser_prototype",
+    "length_estimates",
+    "measure_activity",
+    "measured_report",
+    "nyquist_prototype",
+    "open_recording",
+    "prototype_pair",
+    "split_recording",
+    "tight_prototype",
+    "window_prototype",
+    "write_sigmf",
 ]

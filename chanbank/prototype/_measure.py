@@ -15,6 +15,7 @@ __all__ = [
     "local_peaks",
     "stopband_peak",
     "stopband_ripples",
+    "summit",
 ]
 
 # Grid points per lobe of the response. A lobe is close to half a sine wave; the parabola through
@@ -88,4 +89,15 @@ def band_extremes(taps, channels, low, high):
     lobes = (high - low) * len(taps) / channels
     count = int(np.ceil(16 * lobes)) + 9
     amplitude = np.abs(_response(taps, channels, np.linspace(low, high, count)))
-    return float(amplitude.min() / abs(taps.sum())), float(amplitude.max() / abs(taps.sum()))
+    scale = abs(taps.sum())
+    return -summit(-amplitude) / scale, summit(amplitude) / scale
+
+
+def summit(values):
+    """The largest value of an evenly sampled smooth curve, by the parabola through its top."""
+    at = int(np.argmax(values))
+    if at in (0, len(values) - 1):
+        return float(values[at])
+    left, mid, right = values[at - 1 : at + 2]
+    bend = left - 2 * mid + right
+    return float(mid - (left - right) ** 2 / (8 * bend)) if bend < 0 else float(mid)

@@ -110,7 +110,7 @@ def equiripple_prototype(
     Examples
     --------
     >>> from chanbank import equiripple_prototype
-    >>> h = equiripple_prototype(4096, 12, passband=0.4, stopband=1.0, stopband_db=80)
+    >>> h = equiripple_prototype(4096, 12, passband=0.55, stopband=1.0, stopband_db=80)
     >>> h.length, round(h.design["stopband_db"], 2), h.design["peak_spread_db"] < 0.05
     (49152, 80.0, True)
     """

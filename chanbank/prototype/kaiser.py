@@ -6,7 +6,7 @@ import scipy.signal
 import scipy.special
 
 from chanbank._checks import Integer, Optional, Real, checked
-from chanbank.prototype._measure import band_extremes, decibels, stopband_peak
+from chanbank.prototype._measure import band_extremes, decibels, stopband_peak, summit
 from chanbank.prototype.lengths import deviation, require_band_edges, ripple_db
 from chanbank.prototype.prototype import Prototype, _response
 
@@ -116,14 +116,14 @@ class _Task:
 
     def prototype(self, length, beta):
         # The search looks near the band edges; the whole response has the last word.
-        taps = self.taps(length, beta)
-        reached = -decibels(stopband_peak(taps, self.channels, self.stopband))
-        while reached < self.stopband_db - 1e-9 and length < _LONGEST:
-            length += 1
-            beta = self.best_beta(length, beta)[0]
-            taps = self.taps(length, beta)
-            reached = -decibels(stopband_peak(taps, self.channels, self.stopband))
-        low, high = band_extremes(taps, self.channels, 0.0, self.passband)
+        for extra in range(64):
+            taps = self.taps(length + extra, beta)
+            reached = -float(decibels(stopband_peak(taps, self.channels, self.stopband)))
+            low, high = band_extremes(taps, self.channels, 0.0, self.passband)
+            kept = (high - low) / (high + low) <= self.passband_limit * (1 + 1e-4)
+            if kept and reached >= self.stopband_db - 1e-4:
+                break
+            beta = self.best_beta(length + extra + 1, beta)[0]
         return Prototype(
             taps,
             self.channels,
@@ -133,7 +133,7 @@ class _Task:
                 "beta": float(beta),
                 "passband": self.passband,
                 "stopband": self.stopband,
-                "stopband_db": float(reached),
+                "stopband_db": reached,
                 "passband_db": float(decibels(high / low)),
             },
         )
@@ -143,13 +143,14 @@ class _Task:
         lobe = self.channels / length
         top = min(self.channels / 2, self.stopband + 5 * lobe)
         beyond = np.linspace(self.stopband, top, 61)
-        inside = np.linspace(max(0.0, self.passband - 3 * lobe), self.passband, 37)
+        inside = np.linspace(max(0.0, self.passband - 3 * lobe), self.passband, 49)
         inside = np.append(inside, np.linspace(0.0, inside[0], 17))
         both = np.abs(
             _response(self.taps(length, beta), self.channels, np.concatenate([beyond, inside]))
         )
-        low, high = both[61:].min(), both[61:].max()
-        return both[:61].max(), (high - low) / (high + low)
+        edge, rest = both[61:110], both[110:]
+        low, high = min(-summit(-edge), rest.min()), max(summit(edge), rest.max())
+        return summit(both[:61]), (high - low) / (high + low)
 
     def excess(self, length, beta):
         """By how many dB the worse of stopband and passband misses (at most 0: met)."""
@@ -230,8 +231,9 @@ class _Task:
         while high - low > 1:
             middle = (low + high) // 2
             low, high = (low, middle) if meets(middle) else (middle, high)
-        # Odd and even lengths differ by a little, so look just below the crossing as well.
-        high = next((n for n in range(max(1, high - 2), high) if meets(n)), high)
+        # The excess has a kink wherever a lobe passes an edge: look just below the crossing too.
+        below = 6 if self.channels <= 64 else 2
+        high = next((n for n in range(max(1, high - below), high) if meets(n)), high)
         return high, met[high][0]
 
 

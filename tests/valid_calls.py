@@ -6,6 +6,18 @@ import numpy as np
 
 import chanbank
 
+# Objects that the library makes and hands out; a user never constructs one.
+RESULTS = {
+    "Activity",
+    "Annotation",
+    "BankReport",
+    "ChannelRecording",
+    "FrameBounds",
+    "Recording",
+    "Segment",
+    "SplitResult",
+}
+
 
 def subjects():
     """(name, function) of every public function, constructor and method."""
@@ -14,7 +26,7 @@ def subjects():
         if inspect.isclass(thing):
             if issubclass(thing, BaseException):
                 continue
-            if inspect.isfunction(thing.__init__):
+            if name not in RESULTS and inspect.isfunction(thing.__init__):
                 yield name, thing.__init__
             for key, member in sorted(vars(thing).items()):
                 if key.startswith("_") and key != "__call__":
@@ -41,6 +53,39 @@ def back():
 
 def saved(tmp_path):
     return chanbank.boxcar_prototype(8).save(tmp_path / "saved.npz")
+
+
+def recorded(tmp_path):
+    """A short SigMF recording of noise, opened."""
+    rng = np.random.default_rng(1)
+    noise = (rng.standard_normal(400) + 1j * rng.standard_normal(400)).astype("complex64")
+    path = tmp_path / "quay"
+    chanbank.write_sigmf(path, noise, sample_rate=8.0)
+    return chanbank.open_recording(path)
+
+
+def activity(tmp_path):
+    return chanbank.measure_activity(recorded(tmp_path), bank())
+
+
+def writer(tmp_path):
+    made = chanbank.SigMFWriter(tmp_path / "new", "cf32_le", sample_rate=8.0)
+    made.write(X)
+    return made
+
+
+def npy_writer(tmp_path):
+    return chanbank.NpyWriter(tmp_path / "new.npy", "complex64")
+
+
+def raw_file(tmp_path):
+    path = tmp_path / "raw.bin"
+    X.tofile(path)
+    return path
+
+
+def report():
+    return chanbank.bank_report(plan(), chanbank.window_prototype(8, 4, "hann"))
 
 
 X = np.ones(12, "complex64")
@@ -83,4 +128,91 @@ VALID = {
     "SynthesisBank.push": lambda _: (back().push, {"frames": Y}),
     "SynthesisBank.finish": lambda _: (back().finish, {"out": None}),
     "SynthesisBank.reset": lambda _: (back().reset, {"first_frame": 3}),
+    "Activity.active": lambda tmp: (activity(tmp).active, {"threshold_db": 10.0}),
+    "Activity.duty": lambda tmp: (activity(tmp).duty, {"threshold_db": 10.0}),
+    "NpyWriter": lambda tmp: (
+        chanbank.NpyWriter,
+        {"path": tmp / "new.npy", "dtype": "complex64"},
+    ),
+    "NpyWriter.write": lambda tmp: (npy_writer(tmp).write, {"samples": X}),
+    "Recording.blocks": lambda tmp: (recorded(tmp).blocks, {"size": 10}),
+    "Recording.read": lambda tmp: (recorded(tmp).read, {"start": 1, "count": 10}),
+    "SigMFWriter": lambda tmp: (
+        chanbank.SigMFWriter,
+        {"path": tmp / "new", "datatype": "cf32_le", "sample_rate": 8.0},
+    ),
+    "SigMFWriter.adopt": lambda tmp: (
+        chanbank.SigMFWriter(tmp / "new", "cf32_le", sample_rate=8.0).adopt,
+        {"path": raw_file(tmp)},
+    ),
+    "SigMFWriter.annotate": lambda tmp: (writer(tmp).annotate, {"start": 0, "length": 3}),
+    "SigMFWriter.capture": lambda tmp: (writer(tmp).capture, {"center_frequency": 1e6}),
+    "SigMFWriter.write": lambda tmp: (writer(tmp).write, {"samples": X}),
+    "bank_report": lambda _: (
+        chanbank.bank_report,
+        {"plan": plan(), "prototype": chanbank.boxcar_prototype(8)},
+    ),
+    "compare_reports": lambda _: (chanbank.compare_reports, {"reports": [report(), report()]}),
+    "dual_prototype": lambda _: (
+        chanbank.dual_prototype,
+        {"plan": plan(), "prototype": chanbank.window_prototype(8, 4, "hann")},
+    ),
+    "energy_prototype": lambda _: (
+        chanbank.energy_prototype,
+        {"channels": 8, "taps_per_branch": 4, "stopband": 1.0},
+    ),
+    "equiripple_prototype": lambda _: (
+        chanbank.equiripple_prototype,
+        {"channels": 8, "taps_per_branch": 4, "passband": 0.3, "stopband": 1.0},
+    ),
+    "frame_bounds": lambda _: (
+        chanbank.frame_bounds,
+        {"plan": plan(), "prototype": chanbank.boxcar_prototype(8)},
+    ),
+    "kaiser_prototype": lambda _: (
+        chanbank.kaiser_prototype,
+        {"channels": 8, "stopband_db": 40, "passband": 0.3, "stopband": 1.0},
+    ),
+    "length_estimates": lambda _: (
+        chanbank.length_estimates,
+        {"channels": 8, "passband": 0.3, "stopband": 1.0, "passband_db": 0.1, "stopband_db": 40},
+    ),
+    "measure_activity": lambda tmp: (
+        chanbank.measure_activity,
+        {"recording": recorded(tmp), "bank": bank()},
+    ),
+    "measured_report": lambda _: (chanbank.measured_report, {"analysis": bank()}),
+    "nyquist_prototype": lambda _: (
+        chanbank.nyquist_prototype,
+        {"channels": 8, "taps_per_branch": 4},
+    ),
+    "open_recording": lambda tmp: (
+        chanbank.open_recording,
+        {"path": raw_file(tmp), "datatype": "cf32_le"},
+    ),
+    "prototype_pair": lambda _: (
+        chanbank.prototype_pair,
+        {"plan": plan(), "taps_per_branch": 3},
+    ),
+    "split_recording": lambda tmp: (
+        chanbank.split_recording,
+        {
+            "recording": recorded(tmp),
+            "bank": bank(),
+            "destination": tmp / "channels",
+            "progress": False,
+        },
+    ),
+    "tight_prototype": lambda _: (
+        chanbank.tight_prototype,
+        {"plan": plan(), "taps_per_branch": 4},
+    ),
+    "window_prototype": lambda _: (
+        chanbank.window_prototype,
+        {"channels": 8, "taps_per_branch": 4, "window": "hann"},
+    ),
+    "write_sigmf": lambda tmp: (
+        chanbank.write_sigmf,
+        {"path": tmp / "new", "samples": X, "sample_rate": 8.0},
+    ),
 }

@@ -102,7 +102,8 @@ def prototype_pair(
         h with sum(h) = 1; g with its scale and ``pair_delay``. Both carry the same ``design``:
         ``exact``, ``error_db`` (rms for white input), ``stopband_db`` (of g),
         ``analysis_stopband_db``, ``noise_gain_db``, ``ripple_db`` (the worse of the two),
-        ``pair_delay``, and each its ``series`` (the a_k) where it is one.
+        ``pair_delay``, and each its ``series`` (the a_k) where it is one, with tap i standing at
+        t = (i + ``series_start``) / M.
 
     Raises
     ------
@@ -174,7 +175,7 @@ def prototype_pair(
         delay = ((p + q) * channels - (1 if whole else 2)) // 2
         factor = _best_scale(channels, hop, h, g, delay)
         g, b = g * factor, b * factor
-    return _pair(plan, h, g, delay, edge, passband, (a, None if exact else b), wanted)
+    return _pair(plan, h, g, delay, edge, passband, (a, None if exact else b), wanted, whole)
 
 
 def _pair_of(name, value):
@@ -229,7 +230,7 @@ def _best_scale(channels, hop, h, g, delay):
     return float(passed[:, zero].sum() / (passed**2).sum())
 
 
-def _pair(plan, h, g, delay, edge, passband, series, wanted):
+def _pair(plan, h, g, delay, edge, passband, series, wanted, whole):
     analysis = Prototype(h, plan.channels)
     report = {"method": "joint cosine-series pair", **reached(plan, analysis, (g, delay), edge)}
     report["exact"] = report["error_db"] is None or 10 ** (report["error_db"] / 20) <= EXACT
@@ -244,6 +245,7 @@ def _pair(plan, h, g, delay, edge, passband, series, wanted):
         own = dict(report)
         if coefficients is not None:
             own["series"] = [float(value) for value in coefficients]
+            own["series_start"] = 0.0 if whole and later is not None else 0.5
         out.append(
             Prototype(taps, plan.channels, label=f"{kind}, {side}", design=own, pair_delay=later)
         )

@@ -5,11 +5,11 @@ import math
 import numpy as np
 
 from chanbank._engine.driver import ANALYSIS, analysis_run
-from chanbank._engine.fftw import aligned_bytes, make_plan
+from chanbank._engine.fftw import aligned_bytes, data_address, make_plan
 from chanbank._engine.lanes import VECTOR_BYTES
 from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
-from chanbank._engine.stage import FORMATS
+from chanbank._engine.stage import FORMATS, ZEROS
 from chanbank._engine.threads import Crew
 
 __all__ = ["NumbaAnalysisEngine"]
@@ -36,6 +36,8 @@ class NumbaAnalysisEngine:
         self.layout = layout = _Layout(spec)
         step = layout.step if layout.step <= 3 else 0
         self.run = analysis_run(layout.lane, not layout.paired, step)
+        self.forms = _forms(spec.real)
+        self.alone = spec.workers < 2
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
         self.reset(0, 1)
 
@@ -73,26 +75,19 @@ class NumbaAnalysisEngine:
 
     def push(self, samples, out, zero=0.0, scale=1.0):
         """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`."""
-        kind = samples.dtype
-        numbers = samples.shape[1]
-        if kind.kind == "c":
-            given, count = 2, numbers
-        elif kind.kind == "f" or self.spec.real:
-            given, count = 1, numbers
-        else:
-            given, count = 2, numbers // 2
+        code, given, numbers = self.forms[samples.dtype]
         if not samples.flags.aligned:
             samples = samples.copy()
-        source = samples.__array_interface__["data"][0]
-        form = (FORMATS[kind.name], given, source, zero, scale)
-        self._push(form, samples.strides[0], count, out)
+        form = (code, given, data_address(samples), zero, scale)
+        count = samples.shape[1]
+        self._push(form, samples.strides[0], count // numbers, out)
 
     def push_zeros(self, count, out):
         """Take `count` zero samples; once the window holds only zeros, frames are zeros too."""
         hop, layout = self.spec.hop, self.layout
         busy = min(count, layout.window + self.spec.channels)
         frames = -(-(self.position + busy) // hop) - -(-self.position // hop)
-        form = (FORMATS["zeros"], layout.held, 0, 0.0, 1.0)
+        form = (ZEROS, layout.held, 0, 0.0, 1.0)
         self._push(form, 0, busy, out)
         if count > busy:
             self.reset(self.position + count - busy, len(self.rings))
@@ -101,39 +96,34 @@ class NumbaAnalysisEngine:
 
     def _push(self, form, stride, count, out):
         code, given, source, zero, scale = form
-        origin = self.position
-        hop, end = self.spec.hop, origin + count
-        first, last = -(-origin // hop), -(-end // hop)
-        target = out.__array_interface__["data"][0]
+        origin, hop = self.position, self.spec.hop
+        end = origin + count
+        part = (origin, end, -(-origin // hop), -(-end // hop))
         apart, frame_stride, column_stride = out.strides
         if self.spec.channel_major:
             frame_stride, column_stride = column_stride, frame_stride
-        stream = out.nbytes >= _STREAM_BYTES and out.flags.aligned
+        samples = (code, given, source, origin, zero, scale)
+        strides = (frame_stride, column_stride, out.nbytes >= _STREAM_BYTES)
+        target = data_address(out)
+        if len(self.rings) == 1 and (self.alone or count < 2 * _WORKER_SAMPLES):
+            worker, ring = self.crew.members[0], self.rings[0]
+            self.run(worker.address, ring.address, *samples, target, *strides, *part)
+        else:
+            self._deal(samples, stride, target, apart, strides, part)
+        self.position = end
+
+    def _deal(self, samples, stride, target, apart, strides, part):
+        """Antennas and stretches of frames to the workers, on threads."""
+        code, given, source, *rest = samples
+        first = part[2]
 
         def work(worker, jobs):
             for antenna, ring, part in jobs:
-                self.run(
-                    worker.address,
-                    ring.address,
-                    code,
-                    given,
-                    source + antenna * stride,
-                    origin,
-                    zero,
-                    scale,
-                    target + antenna * apart + (part[2] - first) * frame_stride,
-                    frame_stride,
-                    column_stride,
-                    stream,
-                    *part,
-                )
+                here = target + antenna * apart + (part[2] - first) * strides[0]
+                given_samples = (code, given, source + antenna * stride, *rest)
+                self.run(worker.address, ring.address, *given_samples, here, *strides, *part)
 
-        if len(self.crew.members) == 1 or count * len(self.rings) < 2 * _WORKER_SAMPLES:
-            whole = (origin, end, first, last)
-            work(self.crew.members[0], [(a, ring, whole) for a, ring in enumerate(self.rings)])
-        else:
-            self.crew.run(work, self._jobs(origin, end, first, last))
-        self.position = end
+        self.crew.run(work, self._jobs(*part))
 
     def _jobs(self, origin, end, first, last):
         """The push in parts for the workers: (antenna, ring, (begin, end, first, last)).
@@ -165,6 +155,16 @@ class NumbaAnalysisEngine:
             self.spare += used[:-1]
             self.rings[antenna] = used[-1]
         return jobs
+
+
+def _forms(real):
+    """For each dtype of samples: its code, numbers per sample, array elements per sample."""
+    forms = {}
+    for name, code in FORMATS.items():
+        kind = np.dtype(name)
+        given = 1 if real or kind.kind == "f" else 2
+        forms[kind] = (code, given, 2 if kind.kind in "iu" and given == 2 else 1)
+    return forms
 
 
 class _Layout:

@@ -11,11 +11,11 @@ from chanbank._engine.lanes import address_as_pointer, as_lane, lane_bytes, lane
 from chanbank._engine.move import copy_bytes
 from chanbank._engine.phase import mix
 
-__all__ = ["FORMATS", "NUMBER_BYTES", "stage_run"]
+__all__ = ["FORMATS", "NUMBER_BYTES", "ZEROS", "stage_run"]
 
-# What a push may bring: the code of each dtype. "zeros" reads nothing.
+# What a push may bring: the code of each dtype. Zeros read nothing.
+ZEROS = 0
 FORMATS = {
-    "zeros": 0,
     "complex64": 1,
     "complex128": 2,
     "float32": 3,

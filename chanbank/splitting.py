@@ -55,7 +55,7 @@ _FREQUENCIES = "None or a sequence of frequencies in hertz"
         ([1 << 30], ValueError),
         ([0.5], TypeError),
     ),
-    frequencies=OwnCheck(_FREQUENCIES, (3, TypeError), ([], ValueError), (["a"], TypeError)),
+    frequencies=OwnCheck(_FREQUENCIES, (3, TypeError), ([], ValueError), (["a"], ValueError)),
     start=Real(0),
     length=Optional(Real(above=0)),
     unit=Choice("samples", "seconds"),

@@ -62,8 +62,8 @@ class Staging:
 
     def publish(self):
         """Move every file in the folder to its place."""
-        # Metadata after data: a recording is there once its metadata are.
-        names = sorted(os.listdir(self.folder), key=lambda name: (name.endswith("-meta"), name))
+        # In this order metadata follow their data: a recording is there once its metadata are.
+        names = sorted(os.listdir(self.folder))
         part = os.path.join(self.folder, _LIST + ".part")
         with open(part, "w", encoding="utf-8") as file:
             json.dump(names, file)

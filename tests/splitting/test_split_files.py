@@ -141,6 +141,8 @@ def test_after_a_crash_the_same_call_can_be_repeated(tmp_path, overwrite):
         for name, data in listing_of_files(out).items():
             # Whatever is there under its own name is whole: the new file, or the old one.
             assert overwrite or data == wanted[name]
+            if name.endswith("-meta"):
+                assert (out / name.replace("-meta", "-data")).exists()
         split(path, out, select=[3, 5], overwrite=overwrite)
         assert listing(out) == wanted
     assert crashes >= 10
@@ -150,6 +152,22 @@ def listing_of_files(folder):
     if not folder.exists():
         return {}
     return {path.name: path.read_bytes() for path in folder.iterdir() if path.is_file()}
+
+
+def test_after_an_error_while_files_move_the_call_can_be_repeated(tmp_path, monkeypatch):
+    path, out, real = make(tmp_path), tmp_path / "out", os.replace
+
+    def failing(source, place):
+        if os.path.dirname(place) == str(out) and place.endswith("-meta"):
+            raise OSError(5, "Input/output error")
+        real(source, place)
+
+    with monkeypatch.context() as patch:
+        patch.setattr("os.replace", failing)
+        with pytest.raises(OSError, match="Input/output"):
+            split(path, out, select=[3, 5])
+    assert len(split(path, out, select=[3, 5])) == 2
+    assert len(listing(out)) == 5
 
 
 def test_files_of_others_are_safe_from_what_a_crash_left(tmp_path):

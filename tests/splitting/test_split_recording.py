@@ -271,6 +271,17 @@ def test_the_bank_never_filters_across_a_retune_or_a_gap(tmp_path):
     assert abs(parse_instant(segments[2].datetime) - begin) <= Fraction(1, 2 * 10**12)
 
 
+def test_captures_begin_where_their_frames_do(tmp_path):
+    # 490 samples and 59 of the prototype's tail are 61 hops exactly: no frame more.
+    samples = noise(1000)
+    parts = [(samples[:490], 1e6, 0, None), (samples[490:], 2e6, 490, None)]
+    with retuned(tmp_path, parts) as recording:
+        result = split(recording, bank_of(), tmp_path / "out", select=[0])
+    with open_recording(result.channels[0].path) as channel:
+        assert [(s.start, s.length) for s in channel.segments] == [(0, 61), (61, 63)]
+        assert channel.samples == 61 + 63
+
+
 def test_segments_too_short_for_a_frame_are_left_out(tmp_path):
     bank, samples = bank_of(), noise(1500)
     parts = [(samples[:20], 1e6, 0, None), (samples[20:], 2e6, 20, None)]

@@ -204,7 +204,7 @@ def lead(problem, balance, *, ripple=None, gain_limit=1.0, seed=0, rounds=40):
         levels = [error, stops[0] + balance[0], stops[1] + balance[1]]
         score = max(levels) + 20 * max(0.0, gain - gain_limit)
         if ripple is not None:
-            score += 20 * max(0.0, uneven / ripple - 1)
+            score += 100 * max(0.0, uneven / ripple - 1)
         since = since + 1 if score > best[0] - 0.02 else 0
         if score < best[0]:
             best = (score, x)

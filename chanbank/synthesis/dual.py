@@ -109,7 +109,7 @@ def dual_prototype(
     >>> h = window_prototype(32, 8, ("kaiser", 9.0))
     >>> g = dual_prototype(plan, h)
     >>> g.taps_per_branch, g.pair_delay, g.design["exact"]
-    (14, 351, True)
+    (16, 383, True)
     >>> g.design["error_db"] < -280 and g.design["stopband_db"] < -60
     True
     """

@@ -29,6 +29,7 @@ __all__ = ["prototype_pair"]
 
 _WIDEST = 3.5  # stopband edge in spacings where the oversampling would allow a wider one
 _SEEDS = (0, 1)  # two starts: the problem is not convex, and a second one costs tenths of a second
+_FLAT = 1.0  # dB
 _RELAXED = 30.0  # dB: what g's stopband may give up in a design whose g is corrected afterwards
 
 
@@ -116,11 +117,23 @@ def prototype_pair(
     Error, stopband of h, stopband of g, noise gain, ripple, in dB, without and with the passband
     term, balance 0:
 
-    ======  ========  ==================================  ==================================
-    M/D     P, Q      no demand                           ripple_db=1
-    ======  ========  ==================================  ==================================
-    TABLE
-    ======  ========  ==================================  ==================================
+    ====  =======  ==============================  ==============================
+    M/D   P, Q     no demand                       ripple_db=1
+    ====  =======  ==============================  ==============================
+    2     4, 4     -74, -74, -74, 0.0, 1.7         -33, -33, -36, 0.1, 1.0
+    2     8, 8     -140, -140, -140, 0.0, 1.1      -120, -121, -119, 0.1, 1.0
+    3/2   8, 8     -78, -78, -78, 0.6, 5.1         -70, -74, -73, 0.0, 1.0
+    3/2   8, 16    -109, -109, -109, 0.5, 3.7      -107, -107, -107, 0.1, 1.0
+    4/3   8, 8     -57, -57, -58, 0.9, 5.6         -54, -54, -54, 0.2, 0.9
+    4/3   12, 12   -82, -83, -82, 1.0, 5.8         -78, -77, -77, 0.2, 0.9
+    4/3   12, 24   -115, -115, -115, 0.5, 1.0      -115, -115, -115, 0.5, 1.0
+    4/3   16, 32   -140, -139, -140, 0.0, 0.3      -140, -139, -140, 0.0, 0.3
+    8/7   8, 16    -45, -46, -45, 0.9, 6.7         -44, -44, -44, 0.3, 0.9
+    8/7   16, 32   -77, -77, -77, 0.7, 4.1         -75, -73, -75, 0.3, 0.9
+    4     4, 4     -183, -176, -175, 0.0, 1.7      -135, -135, -134, 0.1, 1.2
+    ====  =======  ==============================  ==============================
+
+    Scaling M and D by the same factor leaves these figures as they are.
 
     References
     ----------
@@ -159,8 +172,12 @@ def prototype_pair(
     problem = JointProblem(
         channels / hop, (p, joint), edge, passband, channels=channels, hop=hop, whole=whole
     )
+    starts = [(ripple_db, seed) for seed in _SEEDS]
+    if ripple_db is None:
+        # The search through flat passbands sometimes ends at a better point for uneven ones too.
+        starts.append((_FLAT, 0))
     _, series = min(
-        (lead(problem, wanted, ripple=ripple_db, seed=seed) for seed in _SEEDS),
+        (lead(problem, wanted, ripple=ripple, seed=seed) for ripple, seed in starts),
         key=lambda found: found[0],
     )
     a, b = problem.parts(series)

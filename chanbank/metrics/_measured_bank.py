@@ -6,6 +6,7 @@ from chanbank.metrics import _pair_run
 from chanbank.metrics._drive import Exact
 from chanbank.metrics._tone_run import run_pair_tones, run_tones
 from chanbank.metrics.figures import DEFINITIONS, Figure
+from chanbank.metrics.formula import UNMIRRORED
 from chanbank.metrics.report import absent_figure
 
 __all__ = ["measure_bank"]
@@ -55,7 +56,7 @@ def _frame(driver):
     elif len(driver.outputs) < driver.plan.output_channels:
         reason = "the bank returns only some of the channels"
     elif driver.real and (2 * driver.plan.exact_offset).denominator != 1:
-        reason = "the channels of a real plan mirror each other only at offsets of k/2"
+        reason = UNMIRRORED
     if reason:
         return {name: absent_figure(name, reason, 1) for name in names}
     low, high = _pair_run.frame_bounds(driver)

@@ -10,7 +10,7 @@ import scipy.fft
 
 __all__ = ["folded_power", "noise_power"]
 
-_FRAMES, _PHASES, _DRAWS = 1024, 4, 4
+_FRAMES, _PHASES, _DRAWS = 512, 4, 3
 
 
 def _runs(driver, column, keep):

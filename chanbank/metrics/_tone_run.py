@@ -3,9 +3,9 @@
 import numpy as np
 
 from chanbank.metrics._drive import Exact, tone
-from chanbank.metrics.tones import ToneResponse
+from chanbank.metrics.tones import NoiseResponse, ToneResponse
 
-__all__ = ["run_pair_tones", "run_tones"]
+__all__ = ["run_noise", "run_pair_tones", "run_tones"]
 
 # Frames averaged, and complex numbers held at a time.
 _FRAMES, _HELD = 48, 1 << 21
@@ -36,6 +36,16 @@ def run_tones(driver, frequencies):
                 )
             )
     return results
+
+
+def run_noise(driver, seed):
+    """Frames of known white noise on two antennas, spread over every phase of the rotation."""
+    first, count = driver.settle() // 2 + 1, 6
+    length = (first + count) * driver.hop
+    empty = np.empty((2, 0, 0))
+    noise = NoiseResponse(seed, length, driver.real, first, driver.outputs, empty)
+    frames = driver.frames(noise.samples().astype(complex), first, count)
+    return NoiseResponse(seed, length, driver.real, first, driver.outputs, frames)
 
 
 def run_pair_tones(driver, frequencies, analysed):

@@ -37,7 +37,7 @@ def compare_reports(reports, *, labels=None, bare_dft=False):
     reports : sequence of BankReport
         One or more; their plans may differ.
     labels : sequence of str, optional
-        Headings; by default the prototypes' labels, or the size.
+        Headings; by default the prototypes' labels, with the taps per branch where they repeat.
     bare_dft : bool, default False
         Add the bare DFT on the first report's plan, with its occupied bandwidth.
 
@@ -53,10 +53,7 @@ def compare_reports(reports, *, labels=None, bare_dft=False):
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan
-    >>> from chanbank.metrics.compare import compare_reports
-    >>> from chanbank.metrics.formula import bank_report
-    >>> from chanbank.prototype.window import window_prototype
+    >>> from chanbank import ChannelPlan, bank_report, compare_reports, window_prototype
     >>> plan = ChannelPlan(1.6e6, 64, 48)
     >>> report = bank_report(plan, window_prototype(64, 12, ("kaiser", 8.0)))
     >>> both = compare_reports([report], bare_dft=True)
@@ -95,7 +92,11 @@ def _checked_reports(reports):
 
 def _checked_labels(labels, reports):
     if labels is None:
-        return [_label(report) for report in reports]
+        names = [_label(report) for report in reports]
+        return [
+            name if names.count(name) == 1 else f"{name} x {report.prototype.taps_per_branch}"
+            for name, report in zip(names, reports, strict=True)
+        ]
     accepted = f"one text for each of the {len(reports)} reports"
     if isinstance(labels, str) or not hasattr(labels, "__iter__"):
         raise wrong_type("labels", accepted, labels)
@@ -114,7 +115,7 @@ def _aligned(cell, width):
 
 def _label(report):
     prototype = report.prototype
-    return prototype.label or f"{report.plan.channels} x {prototype.taps_per_branch} taps"
+    return prototype.label or f"{report.plan.channels} channels"
 
 
 class ReportComparison:

@@ -6,7 +6,7 @@ from chanbank.metrics.figures import DEFINITIONS, Figure
 from chanbank.metrics.leakage import LeakageMatrix
 from chanbank.metrics.report import BankReport
 from chanbank.metrics.system import SystemResponse
-from chanbank.metrics.tones import MeasuredLeakage, ToneResponse
+from chanbank.metrics.tones import MeasuredLeakage, NoiseResponse, ToneResponse
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 
@@ -34,6 +34,7 @@ def report_to_dict(report):
         "leakage": report.leakage.to_dict(),
         "system": _system_to_dict(report.system),
         "tones": [tone.to_dict() for tone in report.tones],
+        "noise": None if report.noise is None else report.noise.to_dict(),
         "notes": list(report.notes),
     }
 
@@ -69,6 +70,7 @@ def report_from_dict(held):
             plan.channels, system["lags"], system["impulse_responses"], system["pair_delay"]
         ),
         tones=[ToneResponse.from_dict(tone) for tone in held["tones"]],
+        noise=None if held["noise"] is None else NoiseResponse.from_dict(held["noise"]),
         floor_db=held["floor"]["value"],
         dtype=held["dtype"],
         notes=held["notes"],

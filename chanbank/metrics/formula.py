@@ -1,5 +1,7 @@
 """The report by formula: every figure from the coefficients."""
 
+import math
+
 import numpy as np
 
 from chanbank._checks import (
@@ -22,13 +24,17 @@ from chanbank.metrics.system import SystemResponse
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 from chanbank.synthesis.condition import noise_gain, pair_delay_of, residual
+from chanbank.synthesis.frames import frame_bounds
 
 __all__ = ["bank_report", "occupied_bands", "same_channels"]
 
 # Each distinct bandwidth costs one pass over the prototype.
 _MOST_WIDTHS = 64
 
-# Largest M for which the coefficient floor of double precision is quoted; see `bank_report`.
+# Up to here the bank's polyphase matrices are small, and frame bounds take a fraction of a second.
+_MOST_COLUMNS = 96
+
+# Band integrals and responses keep their digits down to here, relative to the strongest.
 _FLOOR_DB = -290.0
 
 OCCUPIED = OwnCheck(
@@ -116,9 +122,7 @@ def bank_report(
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan
-    >>> from chanbank.metrics.formula import bank_report
-    >>> from chanbank.prototype.window import window_prototype
+    >>> from chanbank import ChannelPlan, bank_report, window_prototype
     >>> plan = ChannelPlan(1.6e6, 64, 48)
     >>> report = bank_report(plan, window_prototype(64, 12, ("kaiser", 8.0)))
     >>> round(report["adjacent_leakage_ratio"].worst), round(report["alias_worst"].worst)
@@ -276,6 +280,7 @@ def _aliases(plan, shape, bands):
     return {name: _figure(name, values) for name, values in zip(_ALIAS, (worst, mean), strict=True)}
 
 
+UNMIRRORED = "the channels of a real plan mirror each other only at offsets of k/2"
 _ALIAS = ("alias_worst", "alias_mean")
 
 
@@ -386,7 +391,18 @@ def _of_pair(plan, prototype, synthesis, system, edge):
 
 
 def _of_frame(plan, prototype):
-    return {}
+    names = ("frame_lower", "frame_upper", "frame_ratio")
+    if plan.real and (2 * plan.exact_offset).denominator != 1:
+        return {name: absent_figure(name, UNMIRRORED, 1) for name in names}
+    if plan.hop // math.gcd(plan.channels, plan.hop) > _MOST_COLUMNS:
+        reason = (
+            f"hop / gcd(channels, hop) is above {_MOST_COLUMNS}, which takes up to minutes: "
+            "call frame_bounds(plan, prototype)"
+        )
+        return {name: absent_figure(name, reason, 1) for name in names}
+    bounds = frame_bounds(plan, prototype)
+    values = (bounds.lower, bounds.upper, bounds.condition)
+    return {name: _figure(name, value) for name, value in zip(names, values, strict=True)}
 
 
 def _of_cost(plan, prototype, synthesis, pair_delay, dtype):

@@ -36,8 +36,7 @@ class LeakageMatrix:
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan, boxcar_prototype
-    >>> from chanbank.metrics.formula import bank_report
+    >>> from chanbank import ChannelPlan, bank_report, boxcar_prototype
     >>> report = bank_report(ChannelPlan(8.0, 8, 8), boxcar_prototype(8))
     >>> report.leakage.matrix_db([0, 1], [0, 1]).round(2)
     array([[  0.  , -11.98],

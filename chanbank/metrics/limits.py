@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from chanbank._checks import wrong_type, wrong_value
+from chanbank._checks import Instance, OwnCheck, checked, wrong_type, wrong_value
 from chanbank.metrics.figures import DEFINITIONS
 from chanbank.metrics.present import value_text
 from chanbank.metrics.report import BankReport
@@ -38,9 +38,7 @@ class Limits:
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan, boxcar_prototype
-    >>> from chanbank.metrics.formula import bank_report
-    >>> from chanbank.metrics.limits import Limits
+    >>> from chanbank import ChannelPlan, Limits, bank_report, boxcar_prototype
     >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
     >>> print(Limits(scalloping_loss=4, adjacent_leakage_ratio=40).check(report))
     pass  scalloping loss         3.92 dB   at most 4.00 dB    margin 0.08 dB
@@ -48,6 +46,10 @@ class Limits:
     1 of 2 limits failed
     """
 
+    @checked(
+        call=False,
+        limits=OwnCheck("finite numbers or pairs by the names of figures", (3, TypeError)),
+    )
     def __init__(self, **limits):
         if not limits:
             raise TypeError(f"Limits needs at least one of {', '.join(DEFINITIONS)}")
@@ -64,6 +66,7 @@ class Limits:
         """Name to (low, high), None where a side is open."""
         return dict(self._bounds)
 
+    @checked(report=Instance(BankReport))
     def check(self, report):
         """Hold a report against the limits.
 
@@ -82,9 +85,11 @@ class Limits:
         ------
         TypeError
             Not a report.
+
+        Examples
+        --------
+        See the class.
         """
-        if not isinstance(report, BankReport):
-            raise wrong_type("report", "a BankReport", report)
         return LimitCheck(
             tuple(_check(report, name, *bounds) for name, bounds in self._bounds.items())
         )

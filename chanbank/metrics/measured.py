@@ -6,6 +6,7 @@ from chanbank._checks import Integer, Optional, OwnCheck, checked, wrong_type, w
 from chanbank.metrics._drive import Driver
 from chanbank.metrics._measured_bank import measure_bank
 from chanbank.metrics._measured_channels import measure_channels
+from chanbank.metrics._tone_run import run_noise
 from chanbank.metrics.figures import DEFINITIONS
 from chanbank.metrics.formula import OCCUPIED, occupied_bands
 from chanbank.metrics.report import BankReport, absent_figure
@@ -16,7 +17,7 @@ _BANK = OwnCheck("a bank of this library", (3, TypeError), ("bank", TypeError))
 _CHANNELS = OwnCheck(
     "None or a non-empty sequence of output channels", ("all", TypeError), ([-1], ValueError)
 )
-_DEFAULT_CHANNELS = 8
+_DEFAULT_CHANNELS, _LARGE, _FEW = 8, 1024, 3
 
 # Rounding of a bank lies near one epsilon of the strongest output; a few of them are the floor.
 _FLOOR_EPSILONS = 4
@@ -59,7 +60,8 @@ def measured_report(
         As in `bank_report`.
     channels : sequence of int, optional
         Output channels to test with noise; by default up to 8: the first and last two, the middle
-        one and others at random. Every tone is held against every channel.
+        one and others at random (of more than 1024, the first, the middle one and one at random).
+        Every tone is held against every channel.
     max_samples : int, default 2**28
         Most samples for the sweep over all frequencies. A bank that needs more is swept near the
         tested channels only; the figures that need all frequencies then come from noise, with a
@@ -86,8 +88,7 @@ def measured_report(
 
     Examples
     --------
-    >>> from chanbank import AnalysisBank, ChannelPlan, boxcar_prototype
-    >>> from chanbank.metrics.measured import measured_report
+    >>> from chanbank import AnalysisBank, ChannelPlan, boxcar_prototype, measured_report
     >>> bank = AnalysisBank(ChannelPlan(8.0, 8, 6), boxcar_prototype(8))
     >>> report = measured_report(bank)
     >>> round(report["scalloping_loss"].worst, 2)
@@ -109,6 +110,7 @@ def measured_report(
     tested = _chosen(channels, driver, rng)
 
     figures, leakage, tones, notes = measure_channels(driver, tested, bands, edges, max_samples)
+    noise = run_noise(driver, seed)
     found, system, tones, more = measure_bank(driver, tones, float(edges.max()), max_samples)
     figures |= found
     for name, definition in DEFINITIONS.items():
@@ -130,6 +132,7 @@ def measured_report(
         leakage=leakage,
         system=system,
         tones=tones,
+        noise=noise,
         floor_db=20 * np.log10(_FLOOR_EPSILONS * driver.epsilon),
         dtype=driver.dtype.name,
         notes=[*notes, *more, f"{driver.pushed:,} samples pushed, seed {seed}"],
@@ -168,9 +171,11 @@ def _chosen(channels, driver, rng):
     if channels is None:
         if count <= _DEFAULT_CHANNELS:
             return np.arange(count)
-        fixed = {0, 1, count // 2, count - 2, count - 1}
+        few = count > _LARGE
+        fixed = {0, count // 2} if few else {0, 1, count // 2, count - 2, count - 1}
         rest = [k for k in rng.permutation(count).tolist() if k not in fixed]
-        return np.array(sorted(fixed | set(rest[: _DEFAULT_CHANNELS - len(fixed)])))
+        wanted = _FEW if few else _DEFAULT_CHANNELS
+        return np.array(sorted(fixed | set(rest[: wanted - len(fixed)])))
     accepted = f"distinct output channels of the bank, from {outputs.min()} to {outputs.max()}"
     if isinstance(channels, (str, bytes)) or not hasattr(channels, "__iter__"):
         raise wrong_type("channels", accepted, channels)

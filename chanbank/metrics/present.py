@@ -154,8 +154,6 @@ def _absences(report):
 
 def text_table(report, *, absent=True):
     """The report for a terminal, some 80 columns wide."""
-    if not isinstance(absent, bool):
-        raise TypeError(f"absent must be True or False; got {absent!r}")
     rows = [(None, _HEADS)]
     for heading, names in groups():
         cells = [row for name in names if (row := _row(report, name)) is not None]

@@ -2,6 +2,7 @@
 
 import numpy as np
 
+from chanbank._checks import Boolean, OwnCheck, Real, checked
 from chanbank.metrics.figures import DEFINITIONS, Figure
 
 __all__ = ["BankReport"]
@@ -35,6 +36,8 @@ class BankReport:
         Both banks as one, with a synthesis prototype.
     tones : tuple of ToneResponse
         The tones that were run (measured reports).
+    noise : NoiseResponse or None
+        Frames of white noise, sample by sample known (measured reports).
     floor_db : float
         Levels below this, relative to the strongest signal, are rounding.
     dtype : str
@@ -44,8 +47,7 @@ class BankReport:
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan, boxcar_prototype
-    >>> from chanbank.metrics.formula import bank_report
+    >>> from chanbank import ChannelPlan, bank_report, boxcar_prototype
     >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
     >>> round(report["scalloping_loss"].worst, 2), report["enbw"].worst
     (3.92, 1.0)
@@ -67,6 +69,7 @@ class BankReport:
         leakage,
         system,
         tones=(),
+        noise=None,
         floor_db,
         dtype,
         notes=(),
@@ -80,6 +83,7 @@ class BankReport:
             array.flags.writeable = False
         self.figures = {name: figures[name] for name in DEFINITIONS}
         self.leakage, self.system, self.tones = leakage, system, tuple(tones)
+        self.noise = noise
         self.floor_db, self.dtype, self.notes = float(floor_db), dtype, tuple(notes)
 
     def __getitem__(self, name):
@@ -98,6 +102,7 @@ class BankReport:
     def __dir__(self):
         return [*super().__dir__(), *DEFINITIONS]
 
+    @checked(absent=Boolean())
     def table(self, *, absent=True):
         """The report as text for a terminal.
 
@@ -117,8 +122,7 @@ class BankReport:
 
         Examples
         --------
-        >>> from chanbank import ChannelPlan, boxcar_prototype
-        >>> from chanbank.metrics.formula import bank_report
+        >>> from chanbank import ChannelPlan, bank_report, boxcar_prototype
         >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
         >>> print(report.table(absent=False).splitlines()[0])
         Bank report by formula
@@ -156,9 +160,7 @@ class BankReport:
         Examples
         --------
         >>> import json
-        >>> from chanbank import ChannelPlan, boxcar_prototype
-        >>> from chanbank.metrics.formula import bank_report
-        >>> from chanbank.metrics.report import BankReport
+        >>> from chanbank import BankReport, ChannelPlan, bank_report, boxcar_prototype
         >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
         >>> text = json.dumps(report.to_dict(), allow_nan=False)
         >>> BankReport.from_dict(json.loads(text)).table() == report.table()
@@ -169,6 +171,11 @@ class BankReport:
         return report_to_dict(self)
 
     @classmethod
+    @checked(
+        held=OwnCheck(
+            "a dict from BankReport.to_dict", (3, TypeError), (None, TypeError), ({}, ValueError)
+        )
+    )
     def from_dict(cls, held):
         """Rebuild a report from what `to_dict` gave.
 
@@ -194,12 +201,18 @@ class BankReport:
 
         return report_from_dict(held)
 
+    @checked(
+        other=OwnCheck("a BankReport", (3, TypeError), (None, TypeError)),
+        tolerance_db=Real(above=0, unit="dB"),
+    )
     def verify(self, other, *, tolerance_db=0.1):
         """Hold this report against another of the same bank, found the other way.
 
         Every figure that both hold must agree within `tolerance_db` wherever it is above the
-        arithmetic's floor, and the complex response to every tone that either has run must be what
-        the coefficients predict, in every channel and frame, to the floor of the dtype.
+        arithmetic's floor (or three times a measured figure's own uncertainty, where that is
+        more). The complex response to every tone that either has run, and frames of white noise,
+        must be what the coefficients predict, in every channel and frame, to the floor of the
+        dtype: levels in dB alone hide small faults.
 
         Parameters
         ----------
@@ -222,12 +235,10 @@ class BankReport:
 
         Examples
         --------
-        >>> from chanbank import AnalysisBank, ChannelPlan, boxcar_prototype
-        >>> from chanbank.metrics.formula import bank_report
-        >>> from chanbank.metrics.measured import measured_report
-        >>> plan = ChannelPlan(8.0, 8, 6)
-        >>> said = bank_report(plan, boxcar_prototype(8))
-        >>> done = measured_report(AnalysisBank(plan, boxcar_prototype(8)))
+        >>> import chanbank as cb
+        >>> plan, h = cb.ChannelPlan(8.0, 8, 6), cb.boxcar_prototype(8)
+        >>> said = cb.bank_report(plan, h)
+        >>> done = cb.measured_report(cb.AnalysisBank(plan, h))
         >>> said.verify(done).agreed
         True
         """

@@ -55,8 +55,7 @@ class SystemResponse:
 
     Examples
     --------
-    >>> from chanbank import ChannelPlan, Prototype, boxcar_prototype
-    >>> from chanbank.metrics.formula import bank_report
+    >>> from chanbank import ChannelPlan, Prototype, bank_report, boxcar_prototype
     >>> g = Prototype([1.0] * 7 + [0.9], 8, pair_delay=7)
     >>> system = bank_report(ChannelPlan(8.0, 8, 8), boxcar_prototype(8), g).system
     >>> system.impulse_responses.ravel().round(3).tolist()

@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-__all__ = ["MeasuredLeakage", "ToneResponse"]
+__all__ = ["MeasuredLeakage", "NoiseResponse", "ToneResponse"]
 
 
 @dataclass(frozen=True)
@@ -64,6 +64,60 @@ class ToneResponse:
             None if held["pair"] is None else _joined(held["pair"]),
             held["pair_residual"],
         )
+
+
+@dataclass(frozen=True)
+class NoiseResponse:
+    """Some frames of an analysis bank fed with white noise of which every sample is known.
+
+    Attributes
+    ----------
+    seed : int
+        `samples` makes the input again.
+    length : int
+        Samples pushed.
+    real : bool
+        Whether they are real.
+    first : int
+        Index of the first frame held.
+    channels : numpy.ndarray
+        The output channels.
+    frames : numpy.ndarray
+        complex128, shape (antennas, frames, channels): frame phase, antenna by antenna.
+    """
+
+    seed: int
+    length: int
+    real: bool
+    first: int
+    channels: np.ndarray
+    frames: np.ndarray
+
+    def samples(self):
+        """The input, shape (antennas, length): signs, or quarter turns for complex samples."""
+        rng = np.random.default_rng([self.seed, self.length])
+        shape = (len(self.frames), self.length)
+        if self.real:
+            return rng.integers(0, 2, shape) * 2.0 - 1.0
+        return np.array([1, 1j, -1, -1j])[rng.integers(0, 4, shape)]
+
+    def to_dict(self):
+        """JSON-safe."""
+        return {
+            "seed": self.seed,
+            "length": self.length,
+            "real": self.real,
+            "first": self.first,
+            "channels": self.channels.tolist(),
+            "frames": _split(self.frames),
+        }
+
+    @classmethod
+    def from_dict(cls, held):
+        """Rebuild what `to_dict` gave."""
+        frames = _joined(held["frames"])
+        names = ("seed", "length", "real", "first")
+        return cls(*(held[name] for name in names), np.array(held["channels"]), frames)
 
 
 def _split(values):

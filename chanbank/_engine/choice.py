@@ -21,6 +21,10 @@ def make_analysis_engine(spec):
 
 def make_synthesis_engine(spec):
     """The engine that runs a synthesis spec on this machine; its `name` says which it is."""
+    if _compiled():
+        from chanbank._engine.numba_synthesis import NumbaSynthesisEngine
+
+        return NumbaSynthesisEngine(spec)
     return NumpySynthesisEngine(spec)
 
 

@@ -26,10 +26,10 @@ from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
 from chanbank._engine.stage import NUMBER_BYTES, stage_run
 
-__all__ = ["ANALYSIS", "analysis_run", "execute_plan"]
+__all__ = ["ANALYSIS", "analysis_run", "execute_plan", "record", "source_digest"]
 
 
-def _record(text, **special):
+def record(text, **special):
     """A record of 64-bit words, from its names."""
     return np.dtype([(name, special.get(name, np.int64)) for name in text.split()])
 
@@ -40,7 +40,7 @@ def _record(text, **special):
 #   held: numbers per sample in the ring
 #   turned: rows in frame phase (0: none needed); columns: the chosen DFT points (0: all)
 #   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
-ANALYSIS = _record(
+ANALYSIS = record(
     "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
     " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
     " execute plan mix_table mix_high mix_low hop_high hop_low",
@@ -71,12 +71,12 @@ def execute_plan(typingctx, function, plan, source, target):
 @intrinsic
 def _bank_at(typingctx, address):
     """The record that describes a bank, at an address."""
-    record = from_dtype(ANALYSIS)
+    kind = from_dtype(ANALYSIS)
 
     def codegen(context, builder, signature, args):
-        return builder.inttoptr(args[0], context.get_value_type(record))
+        return builder.inttoptr(args[0], context.get_value_type(kind))
 
-    return record(types.int64), codegen
+    return kind(types.int64), codegen
 
 
 @njit(nogil=True, error_model="numpy")
@@ -182,7 +182,7 @@ def analysis_run(lane, real, step):
     the closure, and so of the key under which the compiled code is kept on disk: that cache by
     itself watches this file alone.
     """
-    sources = _digest()
+    sources = source_digest()
     real = int(real)
 
     @njit(_RUN, nogil=True, error_model="numpy", cache=True)
@@ -237,8 +237,8 @@ def analysis_run(lane, real, step):
 
 
 @cache
-def _digest():
+def source_digest():
     here = Path(__file__).parent
-    names = ("lanes.py", "move.py", "phase.py", "stage.py", "fold.py", "driver.py")
+    names = ("lanes.py", "move.py", "phase.py", "stage.py", "fold.py", "driver.py", "unfold.py")
     text = b"".join((here / name).read_bytes() for name in names)
     return int(hashlib.sha256(text + bytes([VECTOR_BYTES])).hexdigest()[:12], 16)

@@ -15,7 +15,9 @@ import weakref
 import numpy as np
 import pyfftw.pyfftw
 
-__all__ = ["Plan", "aligned_bytes", "available", "data_address", "make_plan"]
+from chanbank._engine.buffers import aligned_bytes
+
+__all__ = ["Plan", "available", "make_plan"]
 
 _FORWARD, _BACKWARD = -1, 1
 _MEASURE, _DESTROY_INPUT, _ESTIMATE = 0, 1 << 0, 1 << 6
@@ -97,32 +99,6 @@ def make_plan(points, rows, dtype, kind, source_stride, target_stride):
         if plan is None:
             plan = _plans[key] = Plan(points, rows, dtype, kind, source_stride, target_stride)
         return plan
-
-
-def aligned_bytes(size):
-    """A zeroed buffer of bytes on a cache line."""
-    line = 64
-    buffer = np.zeros(size + line, np.uint8)
-    start = -buffer.ctypes.data % line
-    return buffer[start : start + size]
-
-
-def _reader():
-    """How to find where an array's data lie: read from the array object, if that checks out.
-
-    The attribute for it builds a dictionary or an object on each call, which a push of a few
-    thousand samples would feel; the field itself is part of NumPy's binary interface.
-    """
-    word, head = ctypes.c_size_t.from_address, object.__basicsize__
-
-    def read(array):
-        return word(id(array) + head).value
-
-    probe = np.zeros(4)[1:]
-    return read if read(probe) == probe.ctypes.data else lambda array: array.ctypes.data
-
-
-data_address = _reader()
 
 
 def _address(function):

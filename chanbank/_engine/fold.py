@@ -16,14 +16,14 @@ from numba.extending import intrinsic
 
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes
 
-__all__ = ["fold_block"]
+__all__ = ["TILE", "fold_block", "fold_rows"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
 # Columns (in vectors) folded for all frames before going on: the rows' pieces and their taps stay
 # near, in the first-level cache for few frames and in the second for many.
-_TILE = 4096 // VECTOR_BYTES
+TILE = 4096 // VECTOR_BYTES
 
 _HALF = VECTOR_BYTES // 2
 _LINE = 64  # bytes
@@ -127,16 +127,15 @@ def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column,
 
 
 @njit(nogil=True, error_model="numpy")
-def _fold_part(variant, bank, table, row, taps, out, frames, column, vectors, ahead):
-    """Fold `vectors` vectors of columns for `frames` frames that lie `bank.step` rows apart.
+def fold_rows(
+    variant, table, row, step, column, taps, tap_stride, count, out, stride, frames, vectors, ahead
+):
+    """Fold `vectors` vectors of columns for `frames` frames that lie `step` rows apart.
 
     `row` is the first frame's oldest row, `column` the byte offset of the first column, `taps` the
     address of its oldest tap, `out` of the first frame's result. Returns the next address to
     prefetch (see `fold_block`).
     """
-    step, tap_stride, count = bank.step, bank.tap_stride, bank.rows
-    stride = bank.cycle * bank.folded_stride
-    out += column
     frame = 0
     while frame < frames:
         rows = table + 8 * (row + frame * step)
@@ -222,7 +221,8 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
     sample_bytes = bank.held * lane_bytes(variant)
     tap_bytes = lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = _TILE * per_vector
+    tile = TILE * per_vector
+    stride = bank.cycle * bank.folded_stride
     for start in range(0, bank.channels, tile):
         stop = min(start + tile, bank.channels)
         for member in range(min(bank.cycle, count)):
@@ -241,15 +241,18 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                 oldest = (row - bank.rows + 1) % bank.ring_rows
                 taps = bank.taps + (bank.channels - split + start) * tap_bytes
                 vectors = -(-(min(split, stop) - start) // per_vector)
-                ahead = _fold_part(
+                ahead = fold_rows(
                     variant,
-                    bank,
                     table,
                     oldest,
-                    taps,
-                    out,
-                    frames,
+                    bank.step,
                     start * sample_bytes,
+                    taps,
+                    bank.tap_stride,
+                    bank.rows,
+                    out + start * sample_bytes,
+                    stride,
+                    frames,
                     vectors,
                     ahead,
                 )
@@ -257,15 +260,18 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                 oldest = (row - bank.rows) % bank.ring_rows
                 aligned = -(-split // per_vector) * per_vector
                 if start < split < aligned:
-                    _fold_part(
+                    fold_rows(
                         variant,
-                        bank,
                         table,
                         oldest,
-                        bank.taps,
-                        out,
-                        frames,
+                        bank.step,
                         split * sample_bytes,
+                        bank.taps,
+                        bank.tap_stride,
+                        bank.rows,
+                        out + split * sample_bytes,
+                        stride,
+                        frames,
                         1,
                         0,
                     )
@@ -273,15 +279,18 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                 if column < stop:
                     taps = bank.taps + (column - split) * tap_bytes
                     vectors = -(-(stop - column) // per_vector)
-                    ahead = _fold_part(
+                    ahead = fold_rows(
                         variant,
-                        bank,
                         table,
                         oldest,
-                        taps,
-                        out,
-                        frames,
+                        bank.step,
                         column * sample_bytes,
+                        taps,
+                        bank.tap_stride,
+                        bank.rows,
+                        out + column * sample_bytes,
+                        stride,
+                        frames,
                         vectors,
                         ahead,
                     )

@@ -4,28 +4,23 @@ import math
 
 import numpy as np
 
+from chanbank._engine.buffers import (
+    Ring,
+    address_or_zero,
+    aligned_bytes,
+    data_address,
+    odd_lines,
+    turn_words,
+)
 from chanbank._engine.driver import ANALYSIS, analysis_run
-from chanbank._engine.fftw import aligned_bytes, data_address, make_plan
-from chanbank._engine.lanes import VECTOR_BYTES
+from chanbank._engine.fftw import make_plan
 from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
+from chanbank._engine.sizes import STREAM_BYTES, WORKER_SAMPLES, block_frames, slot_frames
 from chanbank._engine.stage import FORMATS, ZEROS
 from chanbank._engine.threads import Crew
 
 __all__ = ["NumbaAnalysisEngine"]
-
-# Samples per execution of the DFT plan, where frames are short: enough for its full speed, and
-# no more than a small push completes.
-_SLOT_SAMPLES = 1 << 12
-_SLOT_FRAMES = 32
-
-# Results of this many bytes are written past the caches; smaller ones may still be in them when
-# they are read.
-_STREAM_BYTES = 1 << 25
-
-
-# Samples that are worth waking another worker for.
-_WORKER_SAMPLES = 1 << 16
 
 
 class NumbaAnalysisEngine:
@@ -43,7 +38,7 @@ class NumbaAnalysisEngine:
 
     def reset(self, first_sample, antennas):
         self.position = first_sample
-        self.rings = [_Ring(self.layout) for _ in range(antennas)]
+        self.rings = [self.layout.ring() for _ in range(antennas)]
         self.spare = []
 
     def get_state(self):
@@ -103,9 +98,9 @@ class NumbaAnalysisEngine:
         if self.spec.channel_major:
             frame_stride, column_stride = column_stride, frame_stride
         samples = (code, given, source, origin, zero, scale)
-        strides = (frame_stride, column_stride, out.nbytes >= _STREAM_BYTES)
+        strides = (frame_stride, column_stride, out.nbytes >= STREAM_BYTES)
         target = data_address(out)
-        if len(self.rings) == 1 and (self.alone or count < 2 * _WORKER_SAMPLES):
+        if len(self.rings) == 1 and (self.alone or count < 2 * WORKER_SAMPLES):
             worker, ring = self.crew.members[0], self.rings[0]
             self.run(worker.address, ring.address, *samples, target, *strides, *part)
         else:
@@ -134,10 +129,10 @@ class NumbaAnalysisEngine:
         """
         hop, layout = self.spec.hop, self.layout
         parts = -(-len(self.crew.members) // len(self.rings))
-        parts = max(1, min(parts, (end - origin) // _WORKER_SAMPLES, last - first))
+        parts = max(1, min(parts, (end - origin) // WORKER_SAMPLES, last - first))
         marks = [first + (last - first) * part // parts for part in range(parts + 1)]
         while len(self.spare) < (parts - 1) * len(self.rings):
-            self.spare.append(_Ring(layout))
+            self.spare.append(layout.ring())
         jobs = []
         for antenna, ring in enumerate(self.rings):
             here = ring
@@ -184,11 +179,11 @@ class _Layout:
         shared = math.gcd(channels, hop)
         self.cycle, self.step = channels // shared, hop // shared
         self.row_bytes = channels * self.held * self.lane
-        self.row_stride = _odd_lines(self.row_bytes)
+        self.row_stride = odd_lines(self.row_bytes)
         bins = channels if self.paired else channels // 2 + 1
-        self.bins_stride = _odd_lines(bins * 2 * self.lane)
-        self.slot = max(1, min(_SLOT_SAMPLES // channels, _SLOT_FRAMES))
-        frames = _block_frames(self.row_bytes, self.cycle)
+        self.bins_stride = odd_lines(bins * 2 * self.lane)
+        self.slot = slot_frames(channels)
+        frames = block_frames(self.row_bytes, self.cycle)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
@@ -208,17 +203,8 @@ class _Layout:
             table = unit_circle((turn.numerator * t for t in range(MIX_BLOCK)), turn.denominator)
             self.mixer = table.astype(spec.dtype)
 
-
-class _Ring:
-    """The rows that hold one antenna's latest samples."""
-
-    def __init__(self, layout):
-        self.memory = aligned_bytes(layout.ring_rows * layout.row_stride)
-        lines = self.memory.reshape(layout.ring_rows, layout.row_stride)
-        self.rows = lines[:, : layout.row_bytes].view(layout.ring_dtype)
-        numbers = np.arange(2 * layout.ring_rows, dtype=np.int64) % layout.ring_rows
-        self.table = self.memory.ctypes.data + numbers * layout.row_stride
-        self.address = self.table.ctypes.data
+    def ring(self):
+        return Ring(self.ring_rows, self.row_stride, self.row_bytes, self.ring_dtype)
 
 
 class _Worker:
@@ -253,61 +239,28 @@ class _Worker:
             "rotate": spec.rotate,
             "channel_major": spec.channel_major,
             "column_count": spec.column_count,
-            "columns": _address(layout.columns),
-            "taps": _address(layout.taps),
+            "columns": address_or_zero(layout.columns),
+            "taps": address_or_zero(layout.taps),
             "tap_stride": layout.tap_stride,
-            "folded": _address(self.folded),
+            "folded": address_or_zero(self.folded),
             "folded_stride": layout.row_stride,
-            "turned": _address(self.turned),
-            "bins": _address(self.bins),
+            "turned": address_or_zero(self.turned),
+            "bins": address_or_zero(self.bins),
             "bins_stride": layout.bins_stride,
             "execute": layout.plan.execute,
             "plan": layout.plan.address,
-            "mix_table": _address(layout.mixer),
+            "mix_table": address_or_zero(layout.mixer),
         }.items():
             record[name] = value
-        record["mix_high"], record["mix_low"] = _words(spec.turn)
+        record["mix_high"], record["mix_low"] = turn_words(spec.turn)
         # Frame phase takes the mixer's rotation back: exp(+2j pi turn n D).
-        record["hop_high"], record["hop_low"] = _words(spec.turn * spec.hop)
-
-
-def _block_frames(row_bytes, cycle):
-    """Frames to fold at a time.
-
-    A quarter of the second-level cache if that holds eight frames of every residue, which a row
-    of samples then serves at once. Long frames get more room, since rows that come from the third
-    level must serve several frames: eight of each residue within 2 MiB, four beyond, two at worst.
-    """
-    small, large, limit = (size // row_bytes for size in (1 << 18, 1 << 21, 1 << 22))
-    if 2 * cycle > limit:
-        return max(1, small)
-    wanted = min(8 * cycle, max(4 * cycle, large), limit)
-    return max(1, small, wanted)
-
-
-def _address(array):
-    return 0 if array is None else array.ctypes.data
-
-
-def _words(turn):
-    """A turn modulo one in units of 2**-128, rounded, as two 64-bit words."""
-    units = round((turn % 1) * (1 << 128)) % (1 << 128)
-    return units >> 64, units & ((1 << 64) - 1)
-
-
-def _odd_lines(size):
-    """Room for `size` bytes and a vector's overrun, as an odd number of cache lines.
-
-    Rows that lie a power of two apart would all fall into the same few sets of the cache.
-    """
-    lines = -(-(size + VECTOR_BYTES) // 64)
-    return 64 * (lines | 1)
+        record["hop_high"], record["hop_low"] = turn_words(spec.turn * spec.hop)
 
 
 def _tap_rows(taps, rows, channels, lane):
     """The taps reversed in time, one row per branch tap, with room for a vector's overrun."""
     kind = np.float32 if lane == 4 else np.float64
-    stride = _odd_lines(channels * lane)
+    stride = odd_lines(channels * lane)
     memory = aligned_bytes(rows * stride)
     padded = np.zeros(rows * channels)
     padded[: len(taps)] = taps

@@ -1,0 +1,73 @@
+"""Buffers for compiled code: aligned, padded against cache conflicts, known by address."""
+
+import ctypes
+
+import numpy as np
+
+from chanbank._engine.lanes import VECTOR_BYTES
+
+__all__ = [
+    "Ring",
+    "address_or_zero",
+    "aligned_bytes",
+    "data_address",
+    "odd_lines",
+    "turn_words",
+]
+
+
+class Ring:
+    """The rows that hold one antenna's latest rows."""
+
+    def __init__(self, rows, row_stride, row_bytes, dtype):
+        self.memory = aligned_bytes(rows * row_stride)
+        lines = self.memory.reshape(rows, row_stride)
+        self.rows = lines[:, :row_bytes].view(dtype)
+        numbers = np.arange(2 * rows, dtype=np.int64) % rows
+        self.table = self.memory.ctypes.data + numbers * row_stride
+        self.address = self.table.ctypes.data
+
+
+def address_or_zero(array):
+    return 0 if array is None else array.ctypes.data
+
+
+def turn_words(turn):
+    """A turn modulo one in units of 2**-128, rounded, as two 64-bit words."""
+    units = round((turn % 1) * (1 << 128)) % (1 << 128)
+    return units >> 64, units & ((1 << 64) - 1)
+
+
+def odd_lines(size):
+    """Room for `size` bytes and a vector's overrun, as an odd number of cache lines.
+
+    Rows that lie a power of two apart would all fall into the same few sets of the cache.
+    """
+    lines = -(-(size + VECTOR_BYTES) // 64)
+    return 64 * (lines | 1)
+
+
+def aligned_bytes(size):
+    """A zeroed buffer of bytes on a cache line."""
+    line = 64
+    buffer = np.zeros(size + line, np.uint8)
+    start = -buffer.ctypes.data % line
+    return buffer[start : start + size]
+
+
+def _reader():
+    """How to find where an array's data lie: read from the array object, if that checks out.
+
+    The attribute for it builds a dictionary or an object on each call, which a push of a few
+    thousand samples would feel; the field itself is part of NumPy's binary interface.
+    """
+    word, head = ctypes.c_size_t.from_address, object.__basicsize__
+
+    def read(array):
+        return word(id(array) + head).value
+
+    probe = np.zeros(4)[1:]
+    return read if read(probe) == probe.ctypes.data else lambda array: array.ctypes.data
+
+
+data_address = _reader()

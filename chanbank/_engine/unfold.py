@@ -1,0 +1,249 @@
+"""The unfold: rows from the inverse DFTs, weighted by the prototype, added up to samples.
+
+Frame n, transformed to v_n[c], lies in a ring of rows, in row n mod R. Output sample s = mD + d
+gathers from the frames that reach it, oldest first,
+
+    z[s] = sum over j < J of g[d + jD] v_{m-j}[(s - delay) mod M],    J = ceil(L / D),
+
+which is the fold of the analysis bank with D columns, J rows and an offset in the columns: the
+same kernel serves. In absolute phase the mixer's rotation has cancelled; in frame phase each row
+is turned once, when it enters the ring.
+"""
+
+from functools import cache
+
+import numpy as np
+from numba import carray, from_dtype, njit, types
+from numba.extending import intrinsic
+
+from chanbank._engine.driver import execute_plan, record, source_digest
+from chanbank._engine.fold import TILE, fold_rows
+from chanbank._engine.lanes import (
+    VECTOR_BYTES,
+    address_as_pointer,
+    fence,
+    lane_bytes,
+    lane_type,
+    make_variant,
+)
+from chanbank._engine.move import copy_bytes, transpose_frames
+from chanbank._engine.phase import exact_phase, mix, rotate_row, turn_row
+
+__all__ = ["SYNTHESIS", "synthesis_run"]
+
+# A bank: its geometry, its buffers' addresses, its plan.
+#   rows: J; cycle: hops after which columns repeat; block, gather, slot: frames unfolded, taken in
+#   and transformed at a time; held: numbers per sample in the ring; bins: DFT points of a frame
+#   columns, weights: the frame's DFT points and factors (0: all, none)
+#   given, made: rows before and behind the DFT; summed: samples before they are delivered
+#   mix, hop: the turn back per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
+SYNTHESIS = record(
+    "channels hop rows cycle ring_rows block gather slot held bins rotate channel_major real_part"
+    " delay column_count columns weights taps tap_stride given given_stride made made_stride"
+    " row_stride summed summed_stride execute plan mix_table mix_high mix_low hop_high hop_low",
+    mix_high=np.uint64,
+    mix_low=np.uint64,
+    hop_high=np.uint64,
+    hop_low=np.uint64,
+)
+
+
+@intrinsic
+def _bank_at(typingctx, address):
+    """The record that describes a bank, at an address."""
+    kind = from_dtype(SYNTHESIS)
+
+    def codegen(context, builder, signature, args):
+        return builder.inttoptr(args[0], context.get_value_type(kind))
+
+    return kind(types.int64), codegen
+
+
+@njit(nogil=True, error_model="numpy")
+def _take(variant, bank, source, stride, count):
+    """`count` frames from the caller's array to the rows that the DFT reads."""
+    size = 2 * lane_bytes(variant)
+    if bank.channel_major != 0 and bank.columns == 0:
+        transpose_frames(
+            variant,
+            bank.given,
+            bank.given_stride,
+            source,
+            stride,
+            bank.column_count,
+            count,
+            False,
+        )
+    for frame in range(count):
+        row = bank.given + frame * bank.given_stride
+        if bank.columns != 0:
+            column_step = stride if bank.channel_major != 0 else size
+            here = source + frame * (size if bank.channel_major != 0 else stride)
+            _scatter(variant, bank, row, here, column_step)
+        elif bank.channel_major == 0:
+            copy_bytes(row, source + frame * stride, bank.column_count * size, False)
+        if bank.weights != 0:
+            _weigh(variant, row, bank.weights, bank.bins)
+
+
+@njit(nogil=True, error_model="numpy")
+def _scatter(variant, bank, row, source, step):
+    """A frame's columns to their DFT points, all other points zero."""
+    place = carray(address_as_pointer(row), (2 * bank.bins,), lane_type(variant))
+    chosen = carray(address_as_pointer(bank.columns), (bank.column_count,), np.int64)
+    size = 2 * lane_bytes(variant)
+    for i in range(2 * bank.bins):
+        place[i] = 0
+    for i in range(bank.column_count):
+        copy_bytes(row + chosen[i] * size, source + i * step, size, False)
+
+
+@njit(nogil=True, error_model="numpy")
+def _weigh(variant, row, weights, count):
+    """A row times a complex factor for each DFT point, in place."""
+    place = carray(address_as_pointer(row), (2 * count,), lane_type(variant))
+    factor = carray(address_as_pointer(weights), (2 * count,), lane_type(variant))
+    for i in range(count):
+        x, y = place[2 * i], place[2 * i + 1]
+        c, s = factor[2 * i], factor[2 * i + 1]
+        place[2 * i] = x * c - y * s
+        place[2 * i + 1] = x * s + y * c
+
+
+@njit(nogil=True, error_model="numpy")
+def _transform(variant, bank, table, first, count):
+    """Inverse DFTs of `count` given frames, the first of them frame `first`, into the ring."""
+    rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
+    floats = bank.channels * bank.held
+    for slot in range(0, count, bank.slot):
+        execute_plan(bank.execute, bank.plan, bank.given + slot * bank.given_stride, bank.made)
+        for index in range(min(bank.slot, count - slot)):
+            frame = first + slot + index
+            row = rows[frame % bank.ring_rows]
+            source = bank.made + index * bank.made_stride
+            if bank.rotate != 0:
+                copy_bytes(row, source, floats * lane_bytes(variant), False)
+                continue
+            start = (-frame * bank.hop) % bank.channels
+            rotate_row(variant, row, source, start * bank.held, floats)
+            if bank.mix_table != 0:
+                angle = exact_phase(bank.hop_high, bank.hop_low, frame)
+                turn_row(variant, row, bank.channels, angle)
+
+
+@njit(nogil=True, error_model="numpy")
+def _unfold(variant, bank, table, first, count, ahead, ahead_end):
+    """Samples of hops first .. first + count - 1, those whose columns agree together.
+
+    A hop's columns begin at (mD - delay) mod M and may wrap to 0 once: two parts. The first may
+    run over into the second, which is written after it.
+    """
+    sample_bytes = bank.held * lane_bytes(variant)
+    per_vector = VECTOR_BYTES // sample_bytes
+    tile = TILE * per_vector
+    stride = bank.cycle * bank.summed_stride
+    for start in range(0, bank.hop, tile):
+        stop = min(start + tile, bank.hop)
+        for member in range(min(bank.cycle, count)):
+            hops = (count - member + bank.cycle - 1) // bank.cycle
+            newest = first + member
+            oldest = (newest - bank.rows + 1) % bank.ring_rows
+            column = (newest * bank.hop - bank.delay) % bank.channels
+            split = bank.channels - column
+            out = bank.summed + member * bank.summed_stride
+            if ahead >= ahead_end:
+                ahead = 0
+            begin = start
+            for _part in range(2):
+                end = min(stop, split) if begin < split else stop
+                if begin >= end:
+                    continue
+                shift = column if begin < split else column - bank.channels
+                ahead = fold_rows(
+                    variant,
+                    table,
+                    oldest,
+                    bank.cycle,
+                    (begin + shift) * sample_bytes,
+                    bank.taps + begin * lane_bytes(variant),
+                    bank.tap_stride,
+                    bank.rows,
+                    out + begin * sample_bytes,
+                    stride,
+                    hops,
+                    -(-(end - begin) // per_vector),
+                    ahead,
+                )
+                begin = end
+
+
+@njit(nogil=True, error_model="numpy")
+def _deliver(variant, bank, target, first, count, stream):
+    """`count` hops of samples to the result, mixed back where the grid was shifted."""
+    size = bank.hop * bank.held * lane_bytes(variant)
+    for hop in range(count):
+        row = bank.summed + hop * bank.summed_stride
+        if bank.mix_table != 0:
+            time = (first + hop) * bank.hop - bank.delay
+            mix(variant, row, time, bank.hop, bank.mix_high, bank.mix_low, bank.mix_table)
+        if bank.real_part != 0:
+            _real_part(variant, target + hop * size // 2, row, bank.hop)
+        else:
+            copy_bytes(target + hop * size, row, size, stream)
+
+
+@njit(nogil=True, error_model="numpy")
+def _real_part(variant, target, source, count):
+    place = carray(address_as_pointer(target), (count,), lane_type(variant))
+    given = carray(address_as_pointer(source), (2 * count,), lane_type(variant))
+    for i in range(count):
+        place[i] = given[2 * i]
+
+
+_RUN = types.int64(*[types.int64] * 9)
+
+
+@cache
+def synthesis_run(lane, real, step):
+    """The compiled push, as `analysis_run`: addresses and numbers only."""
+    sources = source_digest()
+    real = int(real)
+
+    @njit(_RUN, nogil=True, error_model="numpy", cache=True)
+    def run(bank_address, table, source, stride, target, stream, begin, first, last):
+        """Take frames begin .. last - 1, deliver the samples of hops first .. last - 1.
+
+        `source` is the address of frame `begin`, `stride` the bytes from frame to frame, or from
+        column to column where frames come channel-major; `target` that of hop `first`.
+        """
+        variant = make_variant(lane, real, step)
+        bank = _bank_at(bank_address)
+        size = 2 * lane_bytes(variant)
+        apart = size if bank.channel_major != 0 else stride
+        hop_bytes = bank.hop * lane_bytes(variant)
+        if bank.held == 2 and bank.real_part == 0:
+            hop_bytes *= 2
+        frame = begin
+        while frame < last:
+            count = min(bank.block, last - frame)
+            for start in range(0, count, bank.gather):
+                part = min(bank.gather, count - start)
+                here = source + (frame + start - begin) * apart
+                _take(variant, bank, here, stride, part)
+                _transform(variant, bank, table, frame + start, part)
+            skip = max(0, first - frame)  # frames that only fill the ring
+            if skip < count:
+                ahead = 0
+                soon = 0
+                if bank.channel_major == 0:
+                    ahead = source + (frame + count - begin) * stride
+                    soon = ahead + min(bank.block, last - frame - count) * stride
+                _unfold(variant, bank, table, frame + skip, count - skip, ahead, soon)
+                here = target + (frame + skip - first) * hop_bytes
+                _deliver(variant, bank, here, frame + skip, count - skip, stream != 0)
+            frame += count
+        if stream != 0:
+            fence()
+        return sources
+
+    return run

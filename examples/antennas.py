@@ -11,8 +11,7 @@ import argparse
 
 import numpy as np
 
-from chanbank import AnalysisBank, ChannelPlan
-from chanbank.prototype.kaiser import kaiser_prototype
+from chanbank import AnalysisBank, ChannelPlan, kaiser_prototype
 
 RATE, CENTER = 1.2e6, 156.6e6
 MASTS = np.array([0.0, 0.8, 1.7])  # metres along the quay

@@ -15,8 +15,7 @@ import time
 
 import numpy as np
 
-from chanbank import AnalysisBank, ChannelPlan
-from chanbank.prototype.kaiser import kaiser_prototype
+from chanbank import AnalysisBank, ChannelPlan, kaiser_prototype
 
 RATE, CENTER, SPACING = 1.2e6, 156.6e6, 25e3
 PIECE = 12_000  # samples of one push: 10 ms

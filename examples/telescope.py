@@ -13,8 +13,7 @@ import numpy as np
 from baseband import dada, vdif
 from baseband.data import SAMPLE_DADA, SAMPLE_VDIF
 
-from chanbank import AnalysisBank, ChannelPlan
-from chanbank.prototype.kaiser import kaiser_prototype
+from chanbank import AnalysisBank, ChannelPlan, kaiser_prototype
 
 
 def channel_powers(plan, prototype, samples, piece=4096):
@@ -50,7 +49,7 @@ def main(arguments=None):
     for name, plan, samples in bands:
         prototype = kaiser_prototype(plan.channels, stopband_db=60, passband=0.4, stopband=0.6)
         power = channel_powers(plan, prototype, samples)
-        # A channel's power over its noise bandwidth is a density; all densities add up to the whole.
+        # Power over noise bandwidth is a density; all densities add up to the whole.
         density = power / (prototype_enbw(prototype) * plan.spacing)
         sides = np.where(plan.frequencies % (plan.sample_rate / 2) == 0, 1, 2) if plan.real else 1
         whole = np.sum(density * plan.spacing * sides, axis=-1)

@@ -20,6 +20,8 @@ from chanbank.prototype._measure import decibels
 __all__ = ["JointProblem", "lead", "lead_tight"]
 
 _GRID = 16  # samples to a channel period where nothing finer is needed
+_TAUS = 16  # phases of the condition looked at; it is smooth in between
+_LONG, _FEWER_TAUS = 40, 10  # many taps a branch make it smoother still
 _JITTER = 1e-4
 
 
@@ -47,7 +49,7 @@ class JointProblem:
         p, q = self.lengths[0], self.lengths[-1]
         span = 1 / self.ratio
         exact = grid == channels
-        count = hop if exact else grid
+        count = hop if exact else _TAUS if p + q < _LONG else _FEWER_TAUS
         tau = (np.arange(count) + (0.0 if whole and exact else 0.5)) / count * span
         rows = math.ceil(q / span)
         when_g = tau[:, None] + np.arange(rows) * span
@@ -63,6 +65,7 @@ class JointProblem:
         self.bilinear = np.matmul(h.transpose(0, 1, 3, 2), g[:, None]).reshape(
             -1, self.terms[0], self.terms[-1]
         )
+        self.bilinear_g = np.ascontiguousarray(self.bilinear.transpose(0, 2, 1))
         self.wanted = np.tile((shifts == 0).astype(float), count)
         self.scale = 1 / math.sqrt(count)
 
@@ -111,7 +114,7 @@ class JointProblem:
         """Condition residuals and their derivative."""
         a, b = self.parts(x)
         by_h = self.bilinear @ b
-        by_g = np.einsum("nkl,k->nl", self.bilinear, a)
+        by_g = self.bilinear_g @ a
         slope = by_h + by_g if self.tied else np.hstack([by_h, by_g])
         return by_h @ a - self.wanted, slope
 

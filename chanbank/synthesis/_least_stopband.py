@@ -31,7 +31,7 @@ _EXACT_RIDGE = 1e-9
 # Singular values of the condition (the large ones are about 1) below a cut count as zero: h's
 # smallest taps make them, inverting them costs stopband, and a good start has already met their
 # share of the condition. The first cut that leaves no more than rounding is taken.
-_CUTS = (1e-8, 1e-9, 1e-10, 1e-11, 1e-12)
+_CUTS = (1e-8, 1e-9, 1e-10, 1e-11, 1e-12, 1e-13, 1e-14, 1e-16, 1e-18)
 _ROUNDING = 7e-16
 _SAMPLES = 48  # small problems looked at to choose the cut
 

@@ -15,7 +15,7 @@ from chanbank.synthesis.condition import residual_of_taps, rms_error
 __all__ = ["dual_prototype"]
 
 _COARSE = 32  # channels at least of the thinned problem on which the weight is chosen
-_GAIN_LIMIT = 6.0  # dB: an exact dual noisier than this is not offered unless it is demanded
+_GAIN_LIMIT = 12.0  # dB: an exact dual noisier than this is not offered unless it is demanded
 
 
 @checked(
@@ -63,10 +63,10 @@ def dual_prototype(
         The analysis prototype h, any length, symmetric or not.
     taps_per_branch : int, optional
         Taps per branch Q of g. By default twice the length from which exact duals exist, at most
-        4 times that of h, where that is long enough; else twice that of h.
+        4 times that of h, where that is long enough; else twice that of h; 1 where h has 1.
     exact : bool, optional
         True demands an exact dual, False a balanced one. By default exact where the lengths allow
-        it (to rounding, with a noise gain of at most 6 dB), balanced otherwise.
+        it (to rounding, with a noise gain of at most 12 dB), balanced otherwise.
     least : {"stopband", "norm"}, default "stopband"
         Which exact dual: the one that filters best, or the shortest one, which has the least
         noise gain (with enough taps it is the canonical dual).
@@ -169,6 +169,8 @@ def _edge(plan, stopband):
 
 
 def _default_length(analysis, enough):
+    if analysis == 1:
+        return 1
     if enough is None or enough > 4 * analysis:
         return 2 * analysis
     return max(analysis, min(2 * enough, 4 * analysis))

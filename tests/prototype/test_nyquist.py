@@ -109,7 +109,7 @@ def test_root_raised_cosine_pairs(length, error):
 
 
 def test_refusals():
-    with pytest.raises(ValueError, match="one of 2, 3, 4, 6, 8 .* got 5"):
+    with pytest.raises(ValueError, match=r"one of 2, 3, 4, 6, 8 .* got 5"):
         nyquist_prototype(16, 5, method="optimised")
     with pytest.raises(ValueError, match="rolloff must be None"):
         nyquist_prototype(16, 4, rolloff=0.5)

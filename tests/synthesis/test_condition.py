@@ -107,5 +107,5 @@ def test_pair_delay_is_found_or_asked_for():
     assert pair_delay_of(h, g, 5) == 5
     with pytest.raises(ValueError, match="pair_delay must be given"):
         pair_delay_of(h, g)
-    with pytest.raises(ValueError, match="synthesis.channels"):
+    with pytest.raises(ValueError, match=r"synthesis.channels"):
         residual(ChannelPlan(1.0, 4, 2), h, Prototype(np.ones(8), 8))

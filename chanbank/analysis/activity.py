@@ -240,8 +240,9 @@ class ActivityMeter:
 def _noise(power):
     """Lower quartile over channels of the median over blocks, zeros left out; 0 without any."""
     medians = []
-    for first in range(0, power.shape[1], 1024):
-        part = np.where(power[:, first : first + 1024] > 0, power[:, first : first + 1024], np.nan)
+    for first in range(0, power.shape[1], 64):  # a few channels at a time: medians copy
+        part = power[:, first : first + 64]
+        part = np.where(part > 0, part, np.nan)
         part = part[:, np.isfinite(part).any(axis=0)]
         medians.append(np.nanmedian(part, axis=0) if part.size else np.zeros(0))
     medians = np.concatenate(medians)

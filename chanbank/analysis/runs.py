@@ -21,7 +21,7 @@ __all__ = [
     "stretch_of",
 ]
 
-_BLOCK_BYTES = 32 << 20
+_BLOCK_BYTES = 16 << 20
 
 
 @dataclass(frozen=True)

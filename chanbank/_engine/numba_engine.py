@@ -98,7 +98,7 @@ class NumbaAnalysisEngine:
         if self.spec.channel_major:
             frame_stride, column_stride = column_stride, frame_stride
         samples = (code, given, source, origin, zero, scale)
-        strides = (frame_stride, column_stride, out.nbytes >= STREAM_BYTES)
+        strides = (frame_stride, column_stride, out.nbytes >= STREAM_BYTES and out.flags.aligned)
         target = data_address(out)
         if len(self.rings) == 1 and (self.alone or count < 2 * WORKER_SAMPLES):
             worker, ring = self.crew.members[0], self.rings[0]

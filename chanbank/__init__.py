@@ -3,9 +3,9 @@
 from chanbank.analysis.activity import Activity, measure_activity
 from chanbank.analysis.bank import AnalysisBank
 from chanbank.analysis.summary import ChannelRecording, SplitResult
-from chanbank.metrics.compare import compare_reports
+from chanbank.metrics.compare import ReportComparison, compare_reports
 from chanbank.metrics.formula import bank_report
-from chanbank.metrics.limits import Limits
+from chanbank.metrics.limits import LimitCheck, Limits
 from chanbank.metrics.measured import measured_report
 from chanbank.metrics.report import BankReport
 from chanbank.metrics.verify import ReportDisagreement
@@ -28,6 +28,9 @@ from chanbank.recordings.sigmf_write import write_sigmf
 from chanbank.recordings.sigmf_writer import SigMFWriter
 from chanbank.splitting import split_recording
 from chanbank.synthesis.bank import SynthesisBank
+from chanbank.synthesis.block import BlockInverse
+from chanbank.synthesis.combine import ChannelCombiner, combine_channels
+from chanbank.synthesis.condition import noise_gain, white_error
 from chanbank.synthesis.dual import dual_prototype
 from chanbank.synthesis.frames import FrameBounds, frame_bounds
 from chanbank.synthesis.pair import prototype_pair
@@ -37,14 +40,18 @@ __all__ = [
     "AnalysisBank",
     "Annotation",
     "BankReport",
+    "BlockInverse",
+    "ChannelCombiner",
     "ChannelPlan",
     "ChannelRecording",
     "FrameBounds",
+    "LimitCheck",
     "Limits",
     "NpyWriter",
     "Prototype",
     "Recording",
     "RecordingError",
+    "ReportComparison",
     "ReportDisagreement",
     "Segment",
     "SigMFWriter",
@@ -52,6 +59,7 @@ __all__ = [
     "SynthesisBank",
     "bank_report",
     "boxcar_prototype",
+    "combine_channels",
     "compare_reports",
     "dual_prototype",
     "energy_prototype",
@@ -61,11 +69,13 @@ __all__ = [
     "length_estimates",
     "measure_activity",
     "measured_report",
+    "noise_gain",
     "nyquist_prototype",
     "open_recording",
     "prototype_pair",
     "split_recording",
     "tight_prototype",
+    "white_error",
     "window_prototype",
     "write_sigmf",
 ]

@@ -12,8 +12,12 @@ RESULTS = {
     "Annotation",
     "BankReport",
     "ChannelRecording",
+    "Design",
+    "DesignSearch",
     "FrameBounds",
+    "LimitCheck",
     "Recording",
+    "ReportComparison",
     "Segment",
     "SplitResult",
 }
@@ -86,6 +90,23 @@ def raw_file(tmp_path):
 
 def report():
     return chanbank.bank_report(plan(), chanbank.window_prototype(8, 4, "hann"))
+
+
+def fold_limits(**limits):
+    """`Limits` takes names of figures; the sweep hands it one parameter called `limits`."""
+    return chanbank.Limits(**{"latency_seconds": 1e6, **limits})
+
+
+def pair():
+    return chanbank.prototype_pair(plan(), 3)
+
+
+def combiner():
+    return chanbank.ChannelCombiner(plan(), pair()[1], 2, 3)
+
+
+def specification():
+    return chanbank.Specification(400e3, 25e3, occupied_bandwidth=16e3, neighbour_rejection_db=40)
 
 
 X = np.ones(12, "complex64")
@@ -215,4 +236,50 @@ VALID = {
         chanbank.write_sigmf,
         {"path": tmp / "new", "samples": X, "sample_rate": 8.0},
     ),
+    "BankReport.from_dict": lambda _: (
+        chanbank.BankReport.from_dict,
+        {"held": report().to_dict()},
+    ),
+    "BankReport.table": lambda _: (report().table, {"absent": True}),
+    "BankReport.verify": lambda _: (report().verify, {"other": report()}),
+    "BlockInverse": lambda _: (
+        chanbank.BlockInverse,
+        {
+            "plan": chanbank.ChannelPlan(8.0, 8, 8),
+            "prototype": chanbank.window_prototype(8, 4, "hann"),
+            "frames": 12,
+        },
+    ),
+    "BlockInverse.__call__": lambda _: (
+        chanbank.BlockInverse(
+            chanbank.ChannelPlan(8.0, 8, 8), chanbank.window_prototype(8, 4, "hann"), 12
+        ),
+        {"frames": np.ones((12, 8), "complex64")},
+    ),
+    "BlockInverse.within": lambda _: (
+        chanbank.BlockInverse(
+            chanbank.ChannelPlan(8.0, 8, 8), chanbank.window_prototype(8, 4, "hann"), 12
+        ).within,
+        {"level_db": -40.0},
+    ),
+    "ChannelCombiner": lambda _: (
+        chanbank.ChannelCombiner,
+        {"plan": plan(), "prototype": pair()[1], "first": 2, "count": 3},
+    ),
+    "ChannelCombiner.__call__": lambda _: (combiner(), {"frames": Y}),
+    "ChannelCombiner.push": lambda _: (combiner().push, {"frames": Y}),
+    "combine_channels": lambda _: (
+        chanbank.combine_channels,
+        {"frames": Y, "plan": plan(), "prototype": pair()[1], "first": 2, "count": 3},
+    ),
+    "noise_gain": lambda _: (
+        chanbank.noise_gain,
+        {"plan": plan(), "analysis": pair()[0], "synthesis": pair()[1]},
+    ),
+    "white_error": lambda _: (
+        chanbank.white_error,
+        {"plan": plan(), "analysis": pair()[0], "synthesis": pair()[1]},
+    ),
+    "Limits": lambda _: (fold_limits, {}),
+    "Limits.check": lambda _: (chanbank.Limits(latency_seconds=9).check, {"report": report()}),
 }

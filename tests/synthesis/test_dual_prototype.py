@@ -97,7 +97,7 @@ def test_a_prototype_without_symmetry_and_lengths_that_fill_no_branch():
     assert g.design["exact"]
     assert decibels(white_error(plan, h, g)) == pytest.approx(g.design["error_db"], abs=1e-6)
     early = dual_prototype(plan, h, taps_per_branch=8, pair_delay=50, exact=False)
-    assert early.pair_delay == 50 and early.design["error_db"] < -20
+    assert early.pair_delay == 50 and early.design["error_db"] < -15
 
 
 def test_balanced_dual_stands_where_it_was_asked_to():

@@ -46,10 +46,12 @@ class Exchange:
     errors: np.ndarray
 
 
-def exchange(length, channels, bands):
+def exchange(length, channels, bands, start=None, *, rough=False):
     """The minimax filter of `length` taps, or None where the exchange does not settle.
 
-    `channels` need not be an integer: it is only the sample rate in channel spacings.
+    `channels` need not be an integer: it is only the sample rate in channel spacings. `start` may
+    hold the extremes of a solution with nearly the same bands. `rough` stops at the grid: delta to
+    some thousandths, and no taps.
     """
     odd = length % 2
     count = (length + 1) // 2 + 1
@@ -60,10 +62,15 @@ def exchange(length, channels, bands):
     shape = np.ones_like(w) if odd else np.cos(w / 2)
     x, target, weight = np.cos(w), wanted / shape, shape / level
     at = np.unique(np.round(np.linspace(0, len(f) - 1, count)).astype(int))
+    if start is not None and len(start) == count:
+        near = np.unique(np.clip(np.searchsorted(f, start), 0, len(f) - 1))
+        at = near if len(near) == count else at
     for _ in range(_ITERATIONS):
         fit = _Levelled(x[at], target[at], weight[at])
         error = weight * (target - fit(x))
         error[at] = fit.delta * (-1.0) ** np.arange(len(at))
+        if not np.isfinite(error).all():
+            return None
         chosen = _extremes(error, band, count)
         if chosen is None:
             return None
@@ -71,6 +78,8 @@ def exchange(length, channels, bands):
         if not np.isfinite(peak).all() or fit.delta == 0:
             return None
         if peak.max() - peak.min() <= 1e-6 * peak.max() or np.array_equal(chosen, at):
+            if rough:
+                return Exchange(None, float(peak.mean()), f[chosen], error[chosen] * level[chosen])
             found = _polished(length, channels, bands, f[chosen], band[chosen])
             if found is None:
                 return None

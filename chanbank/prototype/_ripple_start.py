@@ -32,9 +32,17 @@ class _Falling(Band):
         return self.shape(f)
 
 
-def short_solution(lowpass, length, channels, ratio):
-    """The exchange solution with this ratio of ripples, or None; `channels` may be fractional."""
-    return exchange(length, channels, lowpass.bands(channels, ratio))
+def short_solution(lowpass, length, channels, ratio, near=None, *, rough=False):
+    """The exchange solution with this ratio of ripples, or None; `channels` may be fractional.
+
+    `near` is a solution of another ratio, to start from; `rough` as in `exchange`.
+    """
+    bands = lowpass.bands(channels, ratio)
+    if near is not None:
+        found = exchange(length, channels, bands, near.extremes, rough=rough)
+        if found is not None:
+            return found
+    return exchange(length, channels, bands, rough=rough)
 
 
 def _start(lowpass, solution, channels):

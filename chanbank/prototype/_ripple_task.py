@@ -100,7 +100,7 @@ class RippleTask:
         self.stopband, self.slope_db = stopband, slope_db
         self.pieces = isinstance(lowpass, BandSet)
         self.channels = figures.channels
-        self._memory = {}
+        self._memory, self._near = {}, {}
 
     def prototype(self, length):
         found = self.taps(length)
@@ -192,11 +192,14 @@ class RippleTask:
         short += (short + length) % 2
         return (short, short / branch) if short < length else (length, self.channels)
 
-    def _exchange(self, length, ratio):
-        key = length, ratio
+    def _exchange(self, length, ratio, *, rough=False):
+        key = length, ratio, rough
         if key not in self._memory:
             short, rate = self._short(length)
-            self._memory[key] = short_solution(self.lowpass, short, rate, ratio)
+            found = short_solution(self.lowpass, short, rate, ratio, self._near.get(length), rough=rough)
+            self._memory[key] = found
+            if found is not None:
+                self._near[length] = found
         return self._memory[key]
 
     def _ratio(self, length, miss):
@@ -204,13 +207,12 @@ class RippleTask:
 
         None where a ripple on the way falls below what the exchange resolves.
         """
-        even = self._exchange(length, 1.0)
+        even = self._exchange(length, 1.0, rough=True)
         if even is None:
             raise ValueError(self._unsolved(length))
-        exact = self._short(length)[0] == length
 
-        def at(x):
-            found = self._exchange(length, math.exp(x))
+        def at(x, rough=True):
+            found = self._exchange(length, math.exp(x), rough=rough)
             if found is None or min(found.delta, found.delta * math.exp(x)) < 1e-11:
                 raise _TooDeep
             here = math.log(found.delta)
@@ -220,16 +222,14 @@ class RippleTask:
         first = miss(level, level)
         # Raising the ratio lowers delta and raises the deviation, each by some part of it.
         rises = miss(0.0, 1.0) > miss(0.0, 0.0)
-        step = -abs(first) if (first > 0) == rises else abs(first)
+        step = -max(abs(first), 0.1) if (first > 0) == rises else max(abs(first), 0.1)
         low, high = 0.0, step
         try:
-            while abs(first) > 1e-12 and at(low) * at(high) > 0:
+            while at(low) * at(high) > 0:
                 low, high = high, high + step
-            root = (
-                scipy.optimize.brentq(at, low, high, xtol=1e-10 if exact else 1e-3)
-                if abs(first) > 1e-12
-                else 0.0
-            )
+            root = scipy.optimize.brentq(at, low, high, xtol=1e-3)
+            if self._short(length)[0] == length:
+                root = _secant(lambda x: at(x, rough=False), root)
         except _TooDeep:
             return None
         return math.exp(root)
@@ -334,3 +334,16 @@ class RippleTask:
 
 class _TooDeep(Exception):
     """A ripple below what double precision can use."""
+
+
+def _secant(function, x):
+    """A root next to x of a smooth function, to 1e-10."""
+    step, value = 1e-2, function(x)
+    for _ in range(8):
+        other = function(x + step)
+        if other == value:
+            break
+        x, value, step = x + step, other, -other * step / (other - value)
+        if abs(step) < 1e-10:
+            break
+    return x

@@ -17,7 +17,7 @@ __all__ = ["Driver", "Exact", "tone"]
 # Tones lie on multiples of 2^-32 cycles per sample, so that their phase is exact at any sample.
 _TURN = 1 << 32
 
-_SMALL_PIECES = 24
+_SMALL_PIECES, _LARGE_PIECE = 24, 1 << 15
 
 
 class Exact:
@@ -66,16 +66,14 @@ class Driver:
         return -(-(self.length - 1) // self.hop)
 
     def pieces(self, count):
-        """Borders of a random cut: small pieces first, then large ones."""
-        cuts, position = [0], 0
-        for size in self.rng.integers(0, 2 * self.hop + 2, _SMALL_PIECES):
-            size = int(size) if size > 2 else int(size) // 2
-            position = min(count, position + size)
-            cuts.append(position)
-        while position < count:
-            position = min(count, position + int(self.rng.integers(1 << 13, 1 << 16)))
-            cuts.append(position)
-        return cuts
+        """Borders of a random cut: a run of small pieces somewhere, and large ones all along."""
+        sizes = self.rng.integers(0, 2 * self.hop + 2, _SMALL_PIECES)
+        # One sample and none at all, more often than by chance.
+        sizes[:: _SMALL_PIECES // 4] = self.rng.integers(0, 2, 4)
+        start = int(self.rng.integers(0, max(1, count - int(sizes.sum()))))
+        small = np.minimum(count, start + np.cumsum(sizes))
+        large = self.rng.integers(0, count + 1, _SMALL_PIECES // 2 + count // _LARGE_PIECE)
+        return sorted([0, start, *small.tolist(), *large.tolist(), count])
 
     def rotation(self, first, count, columns):
         """exp(2j pi f_k n D) for frames n (absolute index) and chosen columns, exactly reduced."""

@@ -87,16 +87,21 @@ def _latency(driver, tones):
 
 def _worst_frequencies(system):
     """Offsets from a channel's centre at which the measured impulse answers are worst."""
-    f = system.frequencies
-    level = np.abs(system.distortion)
-    marks = {
-        "weak": level.argmin(),
-        "strong": level.argmax(),
-        "error": system.error.argmax(),
-        "sum": system.alias_sum.argmax(),
-        "peak": system.alias_peak.argmax(),
+    f, step = system.frequencies, system.frequencies[1]
+    asked = {
+        "weak": lambda at: -np.abs(system.transfer(at)),
+        "strong": lambda at: np.abs(system.transfer(at)),
+        "error": system.error_power,
+        "sum": system.alias_power,
     }
-    return {name: float(f[at]) for name, at in marks.items()}
+    found = {"peak": float(f[system.alias_peak.argmax()])}
+    for name, level in asked.items():
+        best, reach = float(f[np.argmax(level(f))]), step
+        for _ in range(8):
+            near = best + np.linspace(-reach, reach, 9)
+            best, reach = float(near[np.argmax(level(near))]), reach / 4
+        found[name] = best
+    return found
 
 
 def _pair_figures(driver, system, at, run, edge):
@@ -109,10 +114,8 @@ def _pair_figures(driver, system, at, run, edge):
             np.hypot(0.005, 8.7 * epsilon / np.sqrt(gains["weak"])),
         )
     }
-    delays = np.sort(system.group_delay)
-    found["distortion_delay_spread"] = _figure(
-        "distortion_delay_spread", float(delays[-1] - delays[0]), None
-    )
+    fast, slow = system.delay_extremes()
+    found["distortion_delay_spread"] = _figure("distortion_delay_spread", slow - fast, None)
     errors = [float(np.mean(np.abs(tone.pair - 1) ** 2)) for tone in run]
     found["reconstruction_error_peak"] = _decibels(
         "reconstruction_error_peak", max(errors), epsilon, 0.01

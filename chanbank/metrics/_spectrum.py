@@ -141,12 +141,11 @@ class Curve:
         return where, -height
 
     def crossing(self, level, low, high):
-        """The point of low..high (opposite sides of `level`) where the function equals it."""
-        above = self._function(np.array([low]))[0] > level
+        """The point of low..high where the function, above `level` at low, falls to it."""
         for _ in range(9):
             points = np.linspace(low, high, 17)
-            same = (self._function(points) > level) == above
-            first = int(np.argmin(same)) if not same.all() else len(points) - 1
+            above = self._function(points) > level
+            first = int(np.argmin(above)) if not above.all() else len(points) - 1
             low, high = float(points[max(0, first - 1)]), float(points[first])
         return 0.5 * (low + high)
 

@@ -340,7 +340,9 @@ def worse_of(name, found):
     lower, upper = found[name + "_lower"], found[name + "_upper"]
     pick = np.fmin if DEFINITIONS[name].better == "higher" else np.fmax
     values = pick(lower.values, upper.values)
-    reasons = {k: text for k, text in lower.reasons.items() if np.isnan(values[k])}
+    reasons = {int(k): lower.reason(int(k)) for k in np.flatnonzero(np.isnan(values))}
+    if len(reasons) == len(values) and len(set(reasons.values())) == 1:
+        reasons = {None: reasons[0]}
     return _figure(name, values, reasons)
 
 

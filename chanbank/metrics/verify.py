@@ -195,10 +195,11 @@ def _distance(name, unit, ours, theirs, tolerance, floor, report):
             floor = floor * np.sqrt(report["frame_upper"].values)
         if name == "frame_ratio":
             # A tiny A is rounding: hold the inverse, which is a level below 1.
-            a, b = np.sqrt(1 / ours), np.sqrt(1 / theirs)
+            a, b = np.sqrt(1 / ours), np.sqrt(1 / theirs)  # 1 / inf is 0
     # Rounding shifts an amplitude by at most the floor: in dB that is the more, the weaker it is.
     close = np.abs(a - b) <= floor
-    allowed = np.where(close, np.maximum(difference, tolerance), tolerance)
+    difference = np.where(close, np.minimum(difference, tolerance), difference)
+    allowed = np.full(len(difference), float(tolerance))
     return difference, allowed, "dB"
 
 

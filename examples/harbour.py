@@ -157,6 +157,7 @@ def draw(path, banks, results, calls):
         xlabel="frequency [MHz]",
         ylabel="power [dB re full scale]",
         xlim=(156.2, 157.4),
+        ylim=(-100, 10),
     )
     pilot = (PILOT - SKIFF) / 1e3
     axes[0, 1].axvspan(pilot - 5, pilot + 5, color="tab:orange", alpha=0.3, label="pilot station")

@@ -20,14 +20,17 @@ class BatchDft:
     "real-inverse" (half spectrum to real, unnormalised).
     """
 
-    def __init__(self, channels, batch, dtype, kind):
+    def __init__(self, channels, batch, dtype, kind, room=0):
         real_dtype = np.float32 if np.dtype(dtype) == np.complex64 else np.float64
         half = channels // 2 + 1
         with _PLANNING:
             spectrum = half if kind in ("real", "real-inverse") else channels
-            wave = pyfftw.zeros_aligned(
-                (batch, channels), real_dtype if kind.startswith("real") else dtype, n=64
-            )
+            # Rows on cache lines, with `room` more points behind each for what may run over.
+            wave_dtype = np.dtype(real_dtype if kind.startswith("real") else dtype)
+            line = 64 // wave_dtype.itemsize
+            pitch = -(-(channels + room) // line) * line if room else channels
+            self.wide = pyfftw.zeros_aligned((batch, pitch), wave_dtype, n=64)
+            wave = self.wide[:, :channels]
             bins = pyfftw.zeros_aligned((batch, spectrum), dtype, n=64)
             forward = kind in ("forward", "real")
             source, target = (wave, bins) if forward else (bins, wave)
@@ -39,6 +42,7 @@ class BatchDft:
                 direction="FFTW_FORWARD" if forward else "FFTW_BACKWARD",
                 flags=(effort, "FFTW_DESTROY_INPUT"),
             )
+        self.wide.fill(0)
         source.fill(0)
         self.source, self.target, self.batch = source, target, batch
 

@@ -10,6 +10,7 @@ Frames whose positions differ by whole rows use the same taps for the same colum
 them are folded together, so that a row is loaded once and feeds up to eight sums.
 """
 
+import numpy as np
 from numba import njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
@@ -272,8 +273,8 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                         out + split * sample_bytes,
                         stride,
                         frames,
-                        1,
-                        0,
+                        np.int64(1),
+                        np.int64(0),
                     )
                 column = max(start, aligned)
                 if column < stop:

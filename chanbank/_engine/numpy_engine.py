@@ -16,7 +16,7 @@ from chanbank._engine.threads import Crew
 __all__ = ["NumpyAnalysisEngine"]
 
 # Samples folded and transformed at a time: both buffers stay in the second-level cache.
-_BLOCK_SAMPLES = 1 << 14
+_BLOCK_SAMPLES = 1 << 15
 
 
 class NumpyAnalysisEngine:
@@ -117,7 +117,7 @@ class _Member:
     """The buffers and the plan of one worker."""
 
     def __init__(self, channels, batch, dtype, kind):
-        self.dft = BatchDft(channels, batch, dtype, kind)
+        self.dft = BatchDft(channels, batch, dtype, kind, room=1)
         self.wide = np.empty((batch, 2 * channels), self.dft.source.dtype)
 
     def frames(self, engine, antenna, start, first, size):
@@ -135,18 +135,15 @@ class _Member:
         # Sample t of a frame goes to point t mod M: with absolute phase that is the mixer's
         # rotation, a circular shift by the window's first sample, at no cost in arithmetic.
         if not spec.rotate or spec.hop == channels:
-            shift = 1 % channels if not spec.rotate else (1 - engine.window) % channels
-            _fold(windows[:, :, : channels - shift], engine.weights, 0, source[:, shift:])
-            if shift:
-                _fold(
-                    windows[:, :, channels - shift :],
-                    engine.weights,
-                    channels - shift,
-                    source[:, :shift],
-                )
+            # The same shift for every frame, by one: a window begins one sample after a multiple
+            # of M. The row's last point runs over its end and is fetched back to its start.
+            over = self.dft.wide[:size]
+            shift = 1 % channels
+            _fold(windows, engine.weights, over[:, shift : shift + channels])
+            over[:, :shift] = over[:, channels : channels + shift]
         else:
             wide = self.wide[:size]
-            _fold(windows, engine.weights, 0, wide[:, :channels])
+            _fold(windows, engine.weights, wide[:, :channels])
             wide[:, channels:] = wide[:, :channels]
             residue = (np.arange(size) * (spec.hop % channels)) % channels
             shifts = (residue + (first * spec.hop - engine.window + 1) % channels) % channels
@@ -174,23 +171,19 @@ def _row_weights(taps, rows, channels, real_dtype, complex_work):
     return np.ascontiguousarray(np.repeat(weights, 2 if complex_work else 1, axis=1))
 
 
-def _fold(windows, weights, column, target):
+def _fold(windows, weights, target):
     """target[f, m] = sum_p windows[f, p, m] * weights[p, m], rows oldest first."""
-    if windows.shape[2] == 0:
-        return
     if windows.dtype.kind == "c":
         windows = _as_reals(windows)
         target = _as_reals(target)
-        column *= 2
-    part = weights[:, column : column + windows.shape[2]]
     if windows.shape[2] > 8:
-        np.einsum("fpm,pm->fm", windows, part, out=target)
+        np.einsum("fpm,pm->fm", windows, weights, out=target)
         return
     # A narrow fold: einsum would make the sum over rows its inner loop, whose order of addition
     # depends on the number of frames.
-    np.multiply(windows[:, 0], part[0], out=target)
+    np.multiply(windows[:, 0], weights[0], out=target)
     for row in range(1, windows.shape[1]):
-        target += windows[:, row] * part[row]
+        target += windows[:, row] * weights[row]
 
 
 def _as_reals(array):

@@ -91,7 +91,7 @@ print("done")
 def test_narrower_vectors(width):
     # Machines without 64-byte vectors run the same kernels, narrower.
     root = str(numba_engine.__file__).rsplit("chanbank", 1)[0]
-    environment = os.environ | {"CHANBANK_VECTOR_BYTES": str(width)}
+    environment = os.environ | {"CHANBANK_VECTOR_BYTES": str(width), "CHANBANK_ENGINE": ""}
     done = subprocess.run(
         [sys.executable, "-c", _NARROW, root, str(width)],
         capture_output=True,

@@ -35,6 +35,10 @@ class ChannelRecording:
         This channel's figures of the `Activity`.
     duty : float
         Share of time above the threshold (`Activity.duty`).
+
+    Examples
+    --------
+    See `split_recording`.
     """
 
     index: int
@@ -65,6 +69,10 @@ class SplitResult:
         Above the noise: what counts for duty, and for "active".
     prototype : str or None
         File with the prototype, for `Prototype.load`; None where nothing was written.
+
+    Examples
+    --------
+    See `split_recording`.
     """
 
     channels: tuple

@@ -23,6 +23,10 @@ class Segment:
         segment are counted.
     fields : mapping
         The capture's entries as they stand in the metadata.
+
+    Examples
+    --------
+    See `Recording.segments`.
     """
 
     start: int
@@ -48,6 +52,10 @@ class Annotation:
         The texts.
     fields : mapping
         The annotation's entries as they stand in the metadata.
+
+    Examples
+    --------
+    See `Recording.annotations`.
     """
 
     start: int

@@ -14,6 +14,7 @@ from numba import carray, from_dtype, njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
+from chanbank._engine.compiling import compiled
 from chanbank._engine.fold import fold_block
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
@@ -185,7 +186,7 @@ def analysis_run(lane, real, step):
     sources = source_digest()
     real = int(real)
 
-    @njit(_RUN, nogil=True, error_model="numpy", cache=True)
+    @compiled(_RUN)
     def run(
         bank_address,
         table,

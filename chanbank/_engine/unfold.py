@@ -16,6 +16,7 @@ import numpy as np
 from numba import carray, from_dtype, njit, types
 from numba.extending import intrinsic
 
+from chanbank._engine.compiling import compiled
 from chanbank._engine.driver import execute_plan, record, source_digest
 from chanbank._engine.fold import TILE, fold_rows
 from chanbank._engine.lanes import (
@@ -209,7 +210,7 @@ def synthesis_run(lane, real, step):
     sources = source_digest()
     real = int(real)
 
-    @njit(_RUN, nogil=True, error_model="numpy", cache=True)
+    @compiled(_RUN)
     def run(bank_address, table, source, stride, target, stream, begin, first, last):
         """Take frames begin .. last - 1, deliver the samples of hops first .. last - 1.
 

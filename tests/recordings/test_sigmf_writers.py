@@ -339,12 +339,10 @@ def test_what_a_crash_leaves_is_no_obstacle(tmp_path):
     assert names(tmp_path) == ["quay.sigmf-data", "quay.sigmf-meta"]
 
 
-@pytest.mark.skipif(os.geteuid() == 0, reason="the superuser may write anywhere")
-def test_folders_without_permission(tmp_path):
-    folder = tmp_path / "locked"
-    folder.mkdir(mode=0o500)
+def test_folders_without_permission(unprivileged):
+    unprivileged.enter()
     with pytest.raises(PermissionError, match="not writable"):
-        SigMFWriter(folder / "quay", "ri8")
+        SigMFWriter(unprivileged.folder / "quay", "ri8")
 
 
 def test_a_folder_in_the_way(tmp_path):

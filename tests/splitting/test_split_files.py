@@ -57,12 +57,13 @@ def test_destinations_that_cannot_be(tmp_path):
     assert len(listing(tmp_path / "new" / "deeper")) == 3
 
 
-@pytest.mark.skipif(os.geteuid() == 0, reason="the superuser may write anywhere")
-def test_a_folder_without_permission(tmp_path):
-    path = make(tmp_path)
-    (tmp_path / "locked").mkdir(mode=0o500)
+def test_a_folder_without_permission(unprivileged):
+    path = make(unprivileged.folder)
+    before = listing(unprivileged.folder)
+    unprivileged.enter()
     with pytest.raises(PermissionError):
-        split(path, tmp_path / "locked")
+        split(path, unprivileged.folder)
+    assert listing(unprivileged.folder) == before
 
 
 def test_a_disk_known_to_be_too_small_is_refused_at_once(tmp_path, monkeypatch):

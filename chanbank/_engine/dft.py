@@ -1,16 +1,11 @@
-"""DFT plans: one place that chooses the planning effort, serialises planning and allocates."""
-
-import threading
+"""DFT plans of pyFFTW's own objects, for the NumPy engine."""
 
 import numpy as np
 import pyfftw
 
+from chanbank._engine.planning import TIME_LIMIT, measured, planning
+
 __all__ = ["BatchDft"]
-
-_PLANNING = threading.Lock()
-
-# Measured planning of long or awkward transforms takes seconds and gains little.
-_MEASURE_LIMIT = 1 << 14
 
 
 class BatchDft:
@@ -23,7 +18,7 @@ class BatchDft:
     def __init__(self, channels, batch, dtype, kind, room=0):
         real_dtype = np.float32 if np.dtype(dtype) == np.complex64 else np.float64
         half = channels // 2 + 1
-        with _PLANNING:
+        with planning():
             spectrum = half if kind in ("real", "real-inverse") else channels
             # Rows on cache lines, with `room` more points behind each for what may run over.
             wave_dtype = np.dtype(real_dtype if kind.startswith("real") else dtype)
@@ -34,13 +29,14 @@ class BatchDft:
             bins = pyfftw.zeros_aligned((batch, spectrum), dtype, n=64)
             forward = kind in ("forward", "real")
             source, target = (wave, bins) if forward else (bins, wave)
-            effort = "FFTW_MEASURE" if channels <= _MEASURE_LIMIT else "FFTW_ESTIMATE"
+            effort = "FFTW_MEASURE" if measured(channels) else "FFTW_ESTIMATE"
             self._plan = pyfftw.FFTW(
                 source,
                 target,
                 axes=(1,),
                 direction="FFTW_FORWARD" if forward else "FFTW_BACKWARD",
                 flags=(effort, "FFTW_DESTROY_INPUT"),
+                planning_timelimit=TIME_LIMIT,
             )
         self.wide.fill(0)
         source.fill(0)

@@ -8,24 +8,19 @@ which serialises all planning in the process, whoever asks for it.
 """
 
 import ctypes
-import os
-import threading
 import weakref
 
 import numpy as np
 import pyfftw.pyfftw
 
 from chanbank._engine.buffers import aligned_bytes
+from chanbank._engine.planning import TIME_LIMIT, measured, planning
 
 __all__ = ["Plan", "available", "make_plan"]
 
 _FORWARD, _BACKWARD = -1, 1
 _MEASURE, _DESTROY_INPUT, _ESTIMATE = 0, 1 << 0, 1 << 6
 
-# Measured planning of longer transforms takes seconds; up to here it is a fraction of one.
-_MEASURE_LIMIT = 1 << 16
-
-_planning = threading.RLock()
 _plans = weakref.WeakValueDictionary()
 
 
@@ -73,15 +68,18 @@ class Plan:
         suffix = {"real": "_r2c", "real-inverse": "_c2r"}.get(kind, "")
         planner = getattr(_library, f"{self._prefix}plan_guru64_dft{suffix}")
         self.execute = _address(getattr(_library, f"{self._prefix}execute_dft{suffix}"))
-        effort = _MEASURE if points <= _MEASURE_LIMIT else _ESTIMATE
+        effort = _MEASURE if measured(points) else _ESTIMATE
         # Planning destroys what its arrays hold: it works on arrays of its own.
         source, target = aligned_bytes(rows * source_stride), aligned_bytes(rows * target_stride)
         sign = () if suffix else (_BACKWARD if kind == "inverse" else _FORWARD,)
         places = (ctypes.c_void_p(source.ctypes.data), ctypes.c_void_p(target.ctypes.data))
         flags = ctypes.c_uint(effort | _DESTROY_INPUT)
+        limit = getattr(_library, f"{self._prefix}set_timelimit")
+        limit(ctypes.c_double(TIME_LIMIT))
         self.address = planner(
             1, ctypes.byref(length), 1, ctypes.byref(batch), *places, *sign, flags
         )
+        limit(ctypes.c_double(-1.0))
         if not self.address:
             raise MemoryError(f"FFTW made no plan for {rows} x {points} points")
 
@@ -94,21 +92,14 @@ class Plan:
 def make_plan(points, rows, dtype, kind, source_stride, target_stride):
     """The process's plan of these numbers: banks of one geometry share it, and so their bits."""
     key = (points, rows, np.dtype(dtype).char, kind, source_stride, target_stride)
-    with _planning:
-        plan = _plans.get(key)
-        if plan is None:
-            plan = _plans[key] = Plan(points, rows, dtype, kind, source_stride, target_stride)
-        return plan
+    plan = _plans.get(key)
+    if plan is None:
+        with planning():
+            plan = _plans.get(key)
+            if plan is None:
+                plan = _plans[key] = Plan(points, rows, dtype, kind, source_stride, target_stride)
+    return plan
 
 
 def _address(function):
     return ctypes.cast(function, ctypes.c_void_p).value
-
-
-# A child process must not inherit the lock in the hands of a thread it does not have.
-if hasattr(os, "register_at_fork"):
-    os.register_at_fork(
-        before=_planning.acquire,
-        after_in_parent=_planning.release,
-        after_in_child=_planning.release,
-    )

@@ -94,6 +94,46 @@ def _build_parser():
     _add_raster(sub)
 
     sub = command(
+        "propose",
+        _shell.propose,
+        "find the designs that meet a receiver's specification at the least cost",
+        [
+            "--sample-rate 4.8M --spacing 25k --neighbour-rejection 70 --alias-level -70",
+            "--sample-rate 2.4M --spacing 25000/3 --occupied-bandwidth 5k \\\n"
+            "      --neighbour-rejection 60 --oversampling 2 --save design.npz",
+        ],
+        "Exit code 1 when no design meets the specification; the reason says which limit must "
+        "give.",
+    )
+    group = sub.add_argument_group("samples and raster")
+    _add_rates(group, "of the samples")
+    group.add_argument("--real", action="store_true", help="real samples, not complex ones")
+    group.add_argument("--spacing", type=_frequency, metavar="HZ", help="between channel centres")
+    group.add_argument("--align-to", type=_frequency, metavar="HZ", help="must be a channel centre")
+    group.add_argument(
+        "--oversampling", type=Fraction, default=1, metavar="R", help="at least (default 1)"
+    )
+    group = sub.add_argument_group("limits")
+    _add_occupied(group)
+    for name, unit, words in (
+        ("neighbour-rejection", "DB", "adjacent and alternate leakage ratio, at least"),
+        ("alias-level", "DB", "at most, below 0"),
+        ("total-leakage", "DB", "of all channels together, at most, below 0"),
+        ("reconstruction-error", "DB", "at most, below 0; asks for a synthesis bank too"),
+        ("latency", "S", "seconds, at most"),
+        ("multiplications", "N", "real ones per input sample, at most"),
+        ("memory", "BYTES", "of state, at most"),
+    ):
+        group.add_argument(f"--{name}", type=float, metavar=unit, help=words)
+    group.add_argument(
+        "--passband-ripple", type=float, default=0.5, metavar="DB", help="at most (default 0.5)"
+    )
+    group = sub.add_argument_group("result")
+    group.add_argument("--save", metavar="FILE", help="store the first design's prototype (.npz)")
+    group.add_argument("--overwrite", action="store_true", help="replace a file that exists")
+    group.add_argument("--quiet", action="store_true", help="no progress bar")
+
+    sub = command(
         "split",
         _shell.split,
         "write one SigMF recording for each channel of a recording",
@@ -221,15 +261,19 @@ def _add_filter(sub):
         "filter (by default a minimax prototype, 0.1 dB ripple, that keeps neighbours apart)"
     )
     group.add_argument("--rejection", type=float, default=80.0, metavar="DB", help="default 80")
+    _add_occupied(group)
+    group.add_argument("--prototype", metavar="FILE", help="a saved prototype (.npz) instead")
+    group.add_argument("--bare", action="store_true", help="the bare DFT instead")
+    group.add_argument("--dtype", choices=("complex64", "complex128"), default="complex64")
+
+
+def _add_occupied(group):
     group.add_argument(
         "--occupied-bandwidth",
         type=_frequency,
         metavar="HZ",
         help="of each channel, two-sided (default 0.8 of the spacing)",
     )
-    group.add_argument("--prototype", metavar="FILE", help="a saved prototype (.npz) instead")
-    group.add_argument("--bare", action="store_true", help="the bare DFT instead")
-    group.add_argument("--dtype", choices=("complex64", "complex128"), default="complex64")
 
 
 def _add_pair(sub):

@@ -20,11 +20,13 @@ from chanbank.prototype.boxcar import boxcar_prototype
 from chanbank.prototype.equiripple import equiripple_prototype
 from chanbank.prototype.prototype import Prototype
 from chanbank.recordings import open_recording
+from chanbank.search.find import find_designs
+from chanbank.search.specification import Specification
 from chanbank.splitting import split_recording
 from chanbank.synthesis.bank import SynthesisBank
 from chanbank.synthesis.pair import prototype_pair
 
-__all__ = ["describe", "rebuild", "report", "split"]
+__all__ = ["describe", "propose", "rebuild", "report", "split"]
 
 # Levels are measured in this many pieces, spread evenly over a recording.
 _PIECES, _PIECE = 16, 1 << 18
@@ -246,6 +248,46 @@ def _bank(options, plan, prototype):
 
 def _progress(options):
     return not (options.quiet or options.json) and sys.stderr.isatty()
+
+
+def propose(options):
+    """The designs that meet a specification, and why nothing cheaper does."""
+    for name in ("sample_rate", "spacing"):
+        if getattr(options, name) is None:
+            raise ValueError(f"{name} must be given, in hertz")
+    occupied = options.occupied_bandwidth
+    found = find_designs(
+        Specification(
+            options.sample_rate,
+            options.spacing,
+            occupied_bandwidth=None if occupied is None else float(occupied),
+            neighbour_rejection=options.neighbour_rejection,
+            passband_ripple=options.passband_ripple,
+            alias_level=options.alias_level,
+            total_leakage=options.total_leakage,
+            reconstruction_error=options.reconstruction_error,
+            latency=options.latency,
+            multiplications=options.multiplications,
+            memory=options.memory,
+            oversampling=options.oversampling,
+            center_frequency=options.center_frequency or 0,
+            align_to=options.align_to,
+            real=options.real,
+        ),
+        progress=_progress(options),
+    )
+    lines, data = [found.table()], found.to_dict()
+    if options.save is not None and found.feasible:
+        best = found.best
+        path = best.prototype.save(options.save, overwrite=options.overwrite)
+        use = f"--spacing {options.spacing} --hop {best.plan.hop} --prototype {path}"
+        if best.synthesis_prototype is not None:
+            back = os.path.splitext(path)[0] + "_synthesis.npz"
+            best.synthesis_prototype.save(back, overwrite=options.overwrite)
+            use += f" --synthesis {back}"
+        lines.append(f"The first design is stored; to use it: {use}")
+        data["use"] = use
+    return "\n".join(lines), data, found.feasible
 
 
 def split(options):

@@ -95,6 +95,21 @@ def test_describe_counts_samples_at_full_scale_and_not_finite(capsys, tmp_path):
     assert levels["not_finite"] == 1 and levels["rms_dbfs"] is None
 
 
+def test_propose_finds_a_design_that_meets_its_limits(capsys, tmp_path):
+    words = ["propose", "--sample-rate", "200k", "--spacing", "25k", "--neighbour-rejection", "50"]
+    code, data = run_json(capsys, *words, "--oversampling", "2", "--save", tmp_path / "h.npz")
+    assert code == 0
+    best = data["designs"][0]
+    assert best["channels"] == 8 and best["hop"] <= 4 and best["check"]["passed"]
+    plan = ChannelPlan(200e3, 8, best["hop"])
+    report = bank_report(plan, Prototype.load(tmp_path / "h.npz"))
+    assert report["adjacent_leakage_ratio"].worst >= 50
+    assert f"--hop {best['hop']} --prototype" in data["use"]
+
+    code, out, _ = run(capsys, *words, "--oversampling", "2", "--latency", "1e-6")
+    assert code == 1 and "latency" in out and "must give" in out
+
+
 def test_split_is_the_library_call(capsys, quay, tmp_path):
     """Bit for bit what split_recording writes with the prototype that it stored."""
     words = ["split", quay, tmp_path / "shell", "--spacing", "25k", *FAST, "--output-datatype"]
@@ -232,6 +247,12 @@ def test_rebuild_mutes_and_keeps_the_rest(capsys, quay, tmp_path):
         (["split", "QUAY", "out", "--spacing", "25k", "--occupied-bandwidth", "26k"], "below the"),
         (["split", "QUAY", "out", "--active", "--index", "3", "--spacing", "1k"], "not allowed"),
         (["report", "--spacing", "25k"], "--sample-rate must be given"),
+        (["propose", "--sample-rate", "1M"], "--spacing must be given"),
+        (["propose", "--sample-rate", "1M", "--spacing", "30k"], "nearest sample rates that fit"),
+        (
+            ["propose", "--sample-rate", "1M", "--spacing", "25k", "--passband-ripple", "-1"],
+            "--passband-ripple must be a finite number of dB above 0",
+        ),
         (["report", "--sample-rate", "4M", "--spacing", "25k", "--limit", "enbw"], "FIGURE=VALUE"),
         (["report", "--sample-rate", "4M", "--spacing", "25k", "--limit", "foo=3"], "the figures"),
         (["rebuild", "QUAY", "--spacing", "25k", "--oversampling", "1"], "critical sampling"),

@@ -17,12 +17,27 @@ from scipy.ndimage import maximum_filter1d
 
 from chanbank.prototype._measure import decibels
 
-__all__ = ["JointProblem", "lead", "lead_tight"]
+__all__ = ["JointProblem", "lead", "lead_tight", "stopband_edge"]
 
 _GRID = 16  # samples to a channel period where nothing finer is needed
 _TAUS = 16  # phases of the condition looked at; it is smooth in between
 _LONG, _FEWER_TAUS = 40, 10  # many taps a branch make it smoother still
 _JITTER = 1e-4
+_WIDEST = 3.5  # stopband edge in spacings where the oversampling would allow a wider one
+
+
+def stopband_edge(channels, hop, wanted):
+    """The stopband edge of a design in channel spacings: as wanted, else M/D - 1/2, where the
+    images of the wanted channel begin."""
+    top = min(channels, _GRID) / 2
+    if wanted is None:
+        return max(0.5, min(channels / hop - 0.5, _WIDEST, top - 0.5))
+    if wanted >= top:
+        raise ValueError(
+            f"stopband must satisfy stopband < min(channels, {_GRID}) / 2; got "
+            f"{wanted:g} >= {top:g} channel spacings"
+        )
+    return wanted
 
 
 class JointProblem:

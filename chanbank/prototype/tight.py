@@ -6,14 +6,13 @@ import numpy as np
 
 from chanbank._checks import Instance, Integer, Optional, Real, checked
 from chanbank.plan import ChannelPlan
-from chanbank.prototype._joint_design import JointProblem, lead_tight
+from chanbank.prototype._joint_design import JointProblem, lead_tight, stopband_edge
 from chanbank.prototype._measure import band_extremes, decibels, stopband_peak
 from chanbank.prototype.cosine_series import half_sample_taps
 from chanbank.prototype.prototype import Prototype
 
 __all__ = ["tight_prototype"]
 
-_WIDEST = 3.5  # stopband edge in spacings where the oversampling would allow a wider one
 _FEW = 32  # channels at least of the trial on which start and schedule are chosen
 _LARGEST = 2048  # taps in one interlaced class: the Newton steps are dense in a class
 _ROUNDING = 4e-15  # largest condition residual that counts as met: some 16 units of 2^-52
@@ -100,7 +99,7 @@ def tight_prototype(plan, taps_per_branch, *, stopband=None):
             f"{branches * channels // common}. Take a hop that shares a larger divisor with "
             "channels, or prototype_pair"
         )
-    edge = _edge(plan, stopband)
+    edge = stopband_edge(channels, hop, stopband)
     if branches == 1:
         taps, residual = _newton(_one_branch(channels), channels, hop)
     else:
@@ -122,18 +121,6 @@ def tight_prototype(plan, taps_per_branch, *, stopband=None):
         "stopband_db": float(decibels(stopband_peak(taps, channels, edge) / inner)),
     }
     return Prototype(taps / total, channels, label="tight", design=design)
-
-
-def _edge(plan, stopband):
-    top = min(plan.channels, 16) / 2
-    if stopband is None:
-        return max(0.5, min(plan.channels / plan.hop - 0.5, _WIDEST, top - 0.5))
-    if stopband >= top:
-        raise ValueError(
-            "stopband must satisfy stopband < min(channels, 16) / 2; got "
-            f"{stopband:g} >= {top:g} channel spacings"
-        )
-    return stopband
 
 
 def _one_branch(channels):

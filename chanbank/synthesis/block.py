@@ -152,6 +152,11 @@ class BlockInverse:
         self._factor()
         self._error = self._gain = None
 
+    def __repr__(self):
+        names = ("frames", "length", "regularisation", "phase")
+        shown = ", ".join(f"{name}={getattr(self, name)!r}" for name in names)
+        return f"BlockInverse({self.plan!r}, {self.prototype!r}, {shown})"
+
     def _factor(self):
         """Band Cholesky factors of T T^H + lambda, or of T^H T + lambda for a whole signal."""
         taps = self._branches.shape[1]

@@ -9,7 +9,7 @@ from chanbank._checks import Choice, Instance, Integer, Optional, OwnCheck, chec
 from chanbank.analysis.arrays import bank_dtype
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
-from chanbank.synthesis._between import between_taps
+from chanbank.synthesis._recombine import Recombination
 
 __all__ = ["ChannelCombiner", "combine_channels"]
 
@@ -20,8 +20,6 @@ _FRAMES = OwnCheck(
     (np.ones(3), ValueError),
 )
 _DTYPE = OwnCheck("complex64 or complex128", ("float32", ValueError), (3, ValueError))
-_LARGEST_TABLE = 1 << 25  # weights kept (256 MB)
-_BLOCK = 1 << 14  # output samples weighted at a time
 
 
 class ChannelCombiner:
@@ -148,8 +146,7 @@ class ChannelCombiner:
         self.alias_free = spacings >= count - 1 + 2 * edge
         self._indices = (first + np.arange(count)) % width
         self._set_frequencies(float(edge))
-        self._set_weights()
-        self._set_turns()
+        self._engine = Recombination(plan, prototype, self._indices, spacings, self.dtype)
         self.reset()
 
     def _set_frequencies(self, edge):
@@ -162,38 +159,10 @@ class ChannelCombiner:
         if low < high:
             self.flat_band = tuple(float(lowest + plan.spacing * step) for step in (low, high))
 
-    def _set_weights(self):
-        """weights[m mod period, j] = g(m R + Delta - n D), n the newest frame in reach less j."""
-        hop, over = self.plan.hop, self.spacings
-        # m M / K' modulo D comes back after `period` output samples.
-        self._period = over * hop // math.gcd(self.plan.channels, over * hop)
-        self._reach = -(-self.prototype.length // hop) + 1
-        if self._period * self._reach > _LARGEST_TABLE:
-            raise ValueError(
-                "spacings must leave a table of at most "
-                f"{_LARGEST_TABLE} weights; got {self._period} phases x {self._reach} frames at "
-                f"spacings {over}. Take a multiple of {over // math.gcd(over, self._period)} or a "
-                f"divisor of {self.plan.channels}"
-            )
-        newest = self._newest(np.arange(self._period))
-        whole = np.arange(self._period) * self.plan.channels + (self.delay - newest * hop) * over
-        positions = whole[:, None] / over + np.arange(self._reach) * hop
-        weights = between_taps(self.prototype, positions)
-        self._weights = weights.astype(self.dtype.type(0).real.dtype)
-
-    def _set_turns(self):
-        """Turns exp(2j pi (k - k_c) m / K'): one period of m, and its sign in the next one."""
-        steps = 2 * np.arange(self.count) - (self.count - 1)
-        phase = np.outer(steps, np.arange(self.spacings)) % (2 * self.spacings)
-        turns = np.exp(1j * np.pi * phase / self.spacings).astype(self.dtype)
-        self._cosine, self._sine = turns.real.copy(), turns.imag.copy()
-        self._flips = self.count % 2 == 0
-
-    def _newest(self, m):
-        """Index of the last frame that output sample m needs."""
-        return (m * self.plan.channels + self.delay * self.spacings) // (
-            self.plan.hop * self.spacings
-        )
+    def __repr__(self):
+        names = ("first", "count", "spacings", "phase", "layout")
+        shown = ", ".join(f"{name}={getattr(self, name)!r}" for name in names)
+        return f"ChannelCombiner({self.plan!r}, {self.prototype!r}, {shown}, dtype={self.dtype})"
 
     def reset(self):
         """Forget the stream; the next frame is frame 0.
@@ -275,10 +244,12 @@ class ChannelCombiner:
         See the class.
         """
         frames = self._picked(frames)
-        turned = self._turned(frames)
+        first = self._frame if self.phase == "frame" else None
+        turned = self._engine.turned(frames, first)
+        back = self._engine.reach - 1
         if self._held is None:
             # Before frame 0 there was silence.
-            shape = (*turned.shape[:-3], self._reach - 1, *turned.shape[-2:])
+            shape = (*turned.shape[:-3], back, *turned.shape[-2:])
             held = np.zeros(shape, turned.dtype)
         elif self._held.shape[:-3] != turned.shape[:-3]:
             raise ValueError(
@@ -292,8 +263,8 @@ class ChannelCombiner:
         # Samples whose newest frame is before `end`.
         most = end * self.plan.hop - self.delay
         last = max(self._sample, -((-most * self.spacings) // self.plan.channels))
-        out = self._weighted(known, self._frame - (self._reach - 1), last)
-        self._held = known[..., known.shape[-3] - (self._reach - 1) :, :, :].copy()
+        out = self._engine.weighted(known, self._frame - back, self._sample, last)
+        self._held = known[..., known.shape[-3] - back :, :, :].copy()
         self._frame, self._sample = end, last
         return out
 
@@ -312,18 +283,21 @@ class ChannelCombiner:
         if self._held is None:
             self.reset()
             return np.zeros(0, self.dtype)
-        reach = (self._frame - 1) * self.plan.hop + self.prototype.length - self.delay
-        last = max(self._sample, -((-reach * self.spacings) // self.plan.channels))
-        more = int(self._newest(max(last - 1, 0))) + 1 - self._frame
+        end = (self._frame - 1) * self.plan.hop + self.prototype.length - self.delay
+        last = max(self._sample, -((-end * self.spacings) // self.plan.channels))
+        more = int(self._engine.newest(max(last - 1, 0))) + 1 - self._frame
         silence = np.zeros((*self._held.shape[:-3], max(0, more), *self._held.shape[-2:]))
         known = np.concatenate([self._held, silence.astype(self._held.dtype)], axis=-3)
-        out = self._weighted(known, self._frame - (self._reach - 1), last)
+        begin = self._frame - (self._engine.reach - 1)
+        out = self._engine.weighted(known, begin, self._sample, last)
         self.reset()
         return out
 
     def _picked(self, frames):
         frames = np.asarray(frames)
         if frames.dtype.kind not in "cfiu":
+            raise wrong_type("frames", _FRAMES.accepted, frames)
+        if frames.ndim == 0:
             raise wrong_type("frames", _FRAMES.accepted, frames)
         if frames.ndim < 2:
             raise ValueError(f"frames must be {_FRAMES.accepted}; got shape {frames.shape}")
@@ -343,57 +317,6 @@ class ChannelCombiner:
                 f"{self.count} combined ones; got {width}"
             )
         return frames.astype(self.dtype)
-
-    def _turned(self, frames):
-        """(..., n, 2, K') real and imaginary parts of each frame's K'-point inverse DFT.
-
-        In separate real products, whose rounding does not depend on how many come at once.
-        """
-        if self.phase == "frame":
-            frames = frames * self._rotation(frames.shape[-2])
-        shape = (*frames.shape[:-1], 2, self.spacings)
-        out = np.zeros(shape, self._weights.dtype)
-        for k in range(self.count):
-            real, imag = frames[..., k, None].real, frames[..., k, None].imag
-            out[..., 0, :] += real * self._cosine[k] - imag * self._sine[k]
-            out[..., 1, :] += real * self._sine[k] + imag * self._cosine[k]
-        return out
-
-    def _rotation(self, count):
-        """exp(-2j pi f_k n D), the mixer's turn that frame phase lacks, in exact integers."""
-        offset = self.plan.exact_offset
-        whole = offset.denominator * self.plan.channels
-        index = self.plan.dft_index[self._indices]
-        turns = np.empty((count, self.count), self.dtype)
-        for k, channel in enumerate(index):
-            step = (int(channel) * offset.denominator + offset.numerator) * self.plan.hop % whole
-            phase = [(self._frame + n) * step % whole / whole for n in range(count)]
-            turns[:, k] = np.exp(-2j * np.pi * np.array(phase))
-        return turns
-
-    def _weighted(self, known, begin, last):
-        """Output samples self._sample .. last-1 from frames begin, begin + 1, ..."""
-        lead = known.shape[:-3]
-        out = np.zeros((*lead, max(0, last - self._sample)), self.dtype)
-        for start in range(self._sample, last, _BLOCK):
-            m = np.arange(start, min(start + _BLOCK, last))
-            newest = self._newest(m) - begin
-            weights = self._weights[m % self._period]
-            column = m % self.spacings
-            part = np.zeros((*lead, 2, len(m)), known.dtype)
-            for back in range(self._reach):
-                at = newest - back
-                inside = at >= 0
-                frames = np.where(inside, at, 0)
-                weight = np.where(inside, weights[:, back], 0).astype(known.dtype)
-                for side in range(2):
-                    part[..., side, :] += known[..., frames, side, column] * weight
-            if self._flips:
-                part *= 1 - 2 * ((m // self.spacings) % 2).astype(known.dtype)
-            at = slice(start - self._sample, start - self._sample + len(m))
-            out[..., at].real = part[..., 0, :]
-            out[..., at].imag = part[..., 1, :]
-        return out
 
 
 def _same_pair(plan, prototype):

@@ -33,6 +33,10 @@ class FrameBounds:
         B / A, inf where A is 0: 1 for a tight bank.
     lower_db, upper_db, condition_db : float
         10 log10 of each (-inf and inf where A is 0).
+
+    Examples
+    --------
+    See `frame_bounds`.
     """
 
     lower: float

@@ -17,7 +17,7 @@ from chanbank._checks import (
     wrong_value,
 )
 from chanbank.plan import ChannelPlan
-from chanbank.prototype._joint_design import JointProblem, lead
+from chanbank.prototype._joint_design import JointProblem, lead, stopband_edge
 from chanbank.prototype._measure import band_extremes, decibels
 from chanbank.prototype.cosine_series import half_sample_taps, whole_sample_taps
 from chanbank.prototype.prototype import Prototype
@@ -27,8 +27,8 @@ from chanbank.synthesis.condition import residual_of_taps
 
 __all__ = ["prototype_pair"]
 
-_WIDEST = 3.5  # stopband edge in spacings where the oversampling would allow a wider one
 _SEEDS = (0, 1)  # two starts: the problem is not convex, and a second one costs tenths of a second
+_LONG = 40  # taps per branch, both together
 _FLAT = 1.0  # dB
 _RELAXED = 30.0  # dB: what g's stopband may give up in a design whose g is corrected afterwards
 
@@ -127,9 +127,9 @@ def prototype_pair(
     4/3   8, 8     -57, -57, -58, 0.9, 5.6         -54, -54, -54, 0.2, 0.9
     4/3   12, 12   -82, -83, -82, 1.0, 5.8         -78, -77, -77, 0.2, 0.9
     4/3   12, 24   -115, -115, -115, 0.5, 1.0      -115, -115, -115, 0.5, 1.0
-    4/3   16, 32   -140, -139, -140, 0.0, 0.3      -140, -139, -140, 0.0, 0.3
+    4/3   16, 32   -140, -139, -139, 0.0, 0.4      -140, -139, -140, 0.0, 0.3
     8/7   8, 16    -45, -46, -45, 0.9, 6.7         -44, -44, -44, 0.3, 0.9
-    8/7   16, 32   -77, -77, -77, 0.7, 4.1         -75, -73, -75, 0.3, 0.9
+    8/7   16, 32   -76, -77, -77, 0.7, 4.2         -75, -75, -75, 0.4, 1.0
     4     4, 4     -183, -176, -175, 0.0, 1.7      -135, -135, -134, 0.1, 1.2
     ====  =======  ==============================  ==============================
 
@@ -161,7 +161,7 @@ def prototype_pair(
     p, q = taps_per_branch, synthesis_taps_per_branch or taps_per_branch
     if not exact and q > 96:
         raise ValueError(f"synthesis_taps_per_branch must be at most 96 unless exact=True; got {q}")
-    edge = _edge(plan, stopband)
+    edge = stopband_edge(channels, hop, stopband)
     joint = q
     if exact:
         # g is corrected afterwards: the joint design serves h, at a length near the best.
@@ -173,7 +173,10 @@ def prototype_pair(
         channels / hop, (p, joint), edge, passband, channels=channels, hop=hop, whole=whole
     )
     starts = [(ripple_db, seed) for seed in _SEEDS]
-    if ripple_db is None:
+    if p + joint >= _LONG:
+        # Long pairs end at the same point from every start.
+        starts = starts[:1]
+    elif ripple_db is None:
         # The search through flat passbands sometimes ends at a better point for uneven ones too.
         starts.append((_FLAT, 0))
     _, series = min(
@@ -204,18 +207,6 @@ def _pair_of(name, value):
     if len(parts) != 2 or not all(abs(part) <= 200 for part in parts):
         raise wrong_value(name, what, value)
     return float(parts[0]), float(parts[1])
-
-
-def _edge(plan, stopband):
-    top = min(plan.channels, 16) / 2
-    if stopband is None:
-        return min(plan.channels / plan.hop - 0.5, _WIDEST, max(0.5, top - 0.5))
-    if stopband >= top:
-        raise ValueError(
-            "stopband must satisfy stopband < min(channels, 16) / 2; got "
-            f"{stopband:g} >= {top:g} channel spacings"
-        )
-    return stopband
 
 
 def _refuse_too_short(channels, hop, p, q):

@@ -269,12 +269,25 @@ class PathLike(Rule):
         return [(3, TypeError), (None, TypeError), ("", ValueError)]
 
 
+# What makes an object that is not made by calling its class.
+_MAKERS = {
+    "Activity": "measure_activity(recording, bank)",
+    "BankReport": "bank_report(plan, prototype)",
+    "Prototype": "kaiser_prototype(...) or Prototype.load(path)",
+    "QuantisedPrototype": "quantised(prototype, bits)",
+    "Recording": "open_recording(path)",
+}
+
+
 class Instance(Rule):
     """An object of a class of this library (or one of several)."""
 
     def __init__(self, *classes):
         self.classes = classes
-        self.accepted = "a " + " or a ".join(cls.__name__ for cls in classes)
+        names = [cls.__name__ for cls in classes]
+        self.accepted = "a " + " or a ".join(names)
+        if len(names) == 1 and names[0] in _MAKERS:
+            self.accepted += f", as {_MAKERS[names[0]]} returns it"
 
     def check(self, name, value):
         if not isinstance(value, self.classes):

@@ -333,7 +333,8 @@ class ChannelPlan:
             raise wrong_value(
                 "frequency",
                 f"within the recorded band, {float(low + self.exact_center_frequency):.12g} to "
-                f"{float(half + self.exact_center_frequency):.12g} Hz",
+                f"{float(half + self.exact_center_frequency):.12g} Hz"
+                + (" (center_frequency of the plan is 0)" if not self.center_frequency else ""),
                 float(frequency),
             )
         spacing = self.exact_sample_rate / self.channels

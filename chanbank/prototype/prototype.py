@@ -254,8 +254,11 @@ class Prototype:
         try:
             with np.load(path, allow_pickle=False) as file:
                 held = {name: file[name] for name in file.files}
-        except (ValueError, EOFError, AttributeError, zipfile.BadZipFile) as error:
-            raise ValueError(f"{path!r} is not a prototype file (.npz): {error}") from None
+        except (ValueError, EOFError, AttributeError, zipfile.BadZipFile):
+            # NumPy's own advice for such files, to load them unsafely, is not for this one.
+            raise ValueError(
+                f"{path!r} is not a prototype file, a .npz as Prototype.save writes it"
+            ) from None
         if str(held.get("format")) != "chanbank prototype" or "taps" not in held:
             raise ValueError(
                 f"{path!r} is not a prototype file: it holds {sorted(held)}, "

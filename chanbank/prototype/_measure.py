@@ -94,10 +94,9 @@ def band_extremes(taps, channels, low, high):
 
 
 def summit(values):
-    """The largest value of an evenly sampled smooth curve, by the parabola through its top."""
-    at = int(np.argmax(values))
-    if at in (0, len(values) - 1):
-        return float(values[at])
-    left, mid, right = values[at - 1 : at + 2]
+    """The largest value of an evenly sampled smooth curve, by parabolas through its local tops."""
+    left, mid, right = values[:-2], values[1:-1], values[2:]
     bend = left - 2 * mid + right
-    return float(mid - (left - right) ** 2 / (8 * bend)) if bend < 0 else float(mid)
+    top = (mid >= left) & (mid >= right) & (bend < 0)
+    tops = mid[top] - (left[top] - right[top]) ** 2 / (8 * bend[top])
+    return float(max(values[0], values[-1], tops.max(initial=-np.inf)))

@@ -83,8 +83,8 @@ def kaiser_prototype(
     --------
     >>> from chanbank import kaiser_prototype
     >>> h = kaiser_prototype(192, stopband_db=80, passband=0.4, stopband=0.9)
-    >>> h.length, h.taps_per_branch, round(h.design["stopband_db"], 1)
-    (1952, 11, 80.0)
+    >>> h.taps_per_branch, round(h.design["stopband_db"], 1)
+    (11, 80.0)
     """
     require_band_edges(channels, passband, stopband)
     task = _Task(channels, stopband_db, passband, stopband, passband_db)

@@ -96,7 +96,7 @@ def length_estimates(channels, *, passband, stopband, passband_db, stopband_db):
     ...     64, passband=0.4, stopband=0.6, passband_db=0.1, stopband_db=60
     ... )
     >>> {method: round(value) for method, value in taps.items()}
-    {'kaiser window': 1165, 'kaiser equiripple': 879, 'herrmann-rabiner-chan': 857,
+    {'kaiser window': 1161, 'kaiser equiripple': 865, 'herrmann-rabiner-chan': 870,
      'bellanger': 905, 'harris': 873}
     """
     require_band_edges(channels, passband, stopband)

@@ -105,7 +105,8 @@ def test_a_flat_stopband_adds_up():
 
 
 def test_latency_that_is_too_short_is_named_with_what_would_do():
-    spec = Specification(800e3, 25e3, occupied_bandwidth=16e3, neighbour_rejection=70, latency=1.5e-4)
+    known = dict(occupied_bandwidth=16e3, neighbour_rejection=70)
+    spec = Specification(800e3, 25e3, latency=1.5e-4, **known)
     found = find_designs(spec, methods=["kaiser", "equiripple"])
     assert not found.feasible and found.best is None
     assert "latency, at most 0.15 ms, must give to" in found.reason

@@ -132,6 +132,16 @@ class Driver:
                 part *= self.rotation(first + begin, part.shape[1], columns)
         return kept
 
+    def synthesise(self, frames):
+        """Frames (antennas, frames, channels) through the synthesis bank, cut at random places."""
+        fed = frames.astype(self.dtype)
+        fed = fed.swapaxes(-1, -2) if self.back.layout == "channels" else fed
+        axis = -1 if self.back.layout == "channels" else -2
+        cuts = np.sort(self.rng.integers(0, frames.shape[1] + 1, 5))
+        self.back.reset()
+        parts = np.split(fed, cuts, axis=axis)
+        return np.concatenate([self.back.push(np.ascontiguousarray(p)) for p in parts], axis=-1)
+
     def round_trip(self, signals, first_frame=0):
         """Signals (antennas, n) through both banks, pushed and finished.
 

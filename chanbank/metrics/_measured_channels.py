@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from chanbank.metrics._noise import folded_power, noise_power
+from chanbank.metrics._noise import BIN_WIDTH, folded_power, noise_power
 from chanbank.metrics._sweep import Lines, sweep, sweep_size
 from chanbank.metrics._tone_run import run_tones
 from chanbank.metrics.figures import DEFINITIONS, Figure
@@ -14,6 +14,8 @@ __all__ = ["measure_channels"]
 _RANDOM_TONES = 16
 # What the finite step between lines may cost a figure, in dB.
 _STEP_DB = 0.01
+# A minimum is one when the power rises again by more than rounding: 0.02 dB.
+_RISE = 1.005
 _SIDES = (("_lower", -1), ("_upper", 1))
 _DISTANCES = (
     ("adjacent_leakage_ratio", "adjacent_tone", 1),
@@ -206,12 +208,13 @@ class _Channels:
             return None
         offset, power = self.lines.shifted(row)
         found = []
-        # Rounding is no minimum: a valley must be followed by a rise.
         for sign, start in zip((-1, 1), crossings, strict=True):
             side = np.flatnonzero(sign * offset > start)
             side = side[np.argsort(sign * offset[side])]
             levels = power[side]
             valleys = np.flatnonzero((levels[1:-1] <= levels[:-2]) & (levels[1:-1] < levels[2:]))
+            ahead = np.maximum.accumulate(levels[::-1])[::-1]
+            valleys = valleys[ahead[1 + valleys] > _RISE * levels[1 + valleys]]
             if not len(valleys):
                 return None
             found.append(float(abs(offset[side[1 + valleys[0]]])))
@@ -340,10 +343,12 @@ class _Channels:
                 "alias_mean": self._decibels(mean, 1.0),
             }
         own = float(band.integral(self.lines.power[row]))
+        guard = 1.5 * BIN_WIDTH / self.driver.hop
         power, spread = folded_power(
             self.driver,
             int(self.tested[row]),
-            lambda f: 1.0 - _inside(f, [(low, high)]),
+            # The wanted signal itself must not reach the bins at the ends of the band.
+            lambda f: 1.0 - _inside(f, [(low - guard, high + guard)]),
             low,
             high,
         )

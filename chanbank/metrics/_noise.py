@@ -8,9 +8,10 @@ the chance in their sum cancels.
 import numpy as np
 import scipy.fft
 
-__all__ = ["folded_power", "noise_power"]
+__all__ = ["BIN_WIDTH", "folded_power", "noise_power"]
 
 _FRAMES, _PHASES, _DRAWS = 512, 4, 3
+BIN_WIDTH = 1 / _FRAMES  # in cycles per frame
 
 
 def _runs(driver, column, keep):
@@ -39,10 +40,12 @@ def noise_power(driver, column, keep):
 
 def folded_power(driver, column, keep, low, high):
     """The same, counting only output frequencies low..high (cycles per sample of the input)."""
-    bins = np.arange(_FRAMES) / _FRAMES / driver.hop
-    inside = np.mod(bins - low, 1 / driver.hop) <= high - low
+    # The share of each bin, one step wide, that lies in the band, in steps around its middle.
+    bins = np.arange(_FRAMES) - 0.5 * (low + high) * _FRAMES * driver.hop
+    away = np.abs(np.mod(bins + _FRAMES / 2, _FRAMES) - _FRAMES / 2)
+    inside = np.clip(0.5 * (high - low) * _FRAMES * driver.hop - away + 0.5, 0.0, 1.0)
     parts = []
     for frames in _runs(driver, column, keep):
         spectrum = np.abs(scipy.fft.fft(frames, axis=1)) ** 2 / _FRAMES**2
-        parts.append(spectrum[:, inside].sum(axis=1).mean())
+        parts.append((spectrum @ inside).mean())
     return float(np.mean(parts)), float(np.std(parts, ddof=1) / np.sqrt(len(parts)))

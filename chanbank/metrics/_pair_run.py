@@ -155,32 +155,32 @@ def frame_bounds(driver):
         answers = np.concatenate([answers, answers[..., paired].conj()], axis=-1)
     index = np.arange(count)
 
-    def blocks(cycles):
-        turns = np.exp(-2j * np.pi * np.outer(cycles, index))
-        return np.einsum("wn,pnk->wpk", turns, answers)
+    def extremes(cycles, exact=False):
+        blocks = np.einsum("wn,pnk->wpk", np.exp(-2j * np.pi * np.outer(cycles, index)), answers)
+        if exact:
+            values = np.linalg.svd(blocks, compute_uv=False)
+            return values[:, -1] ** 2, values[:, 0] ** 2
+        values = [np.linalg.eigvalsh(block @ block.conj().T)[[0, -1]] for block in blocks]
+        return np.array(values).T
 
-    def extremes(cycles):
-        values = np.linalg.svd(blocks(cycles), compute_uv=False)
-        return values[:, -1] ** 2, values[:, 0] ** 2
-
-    # The scan by eigenvalues, six times as fast; singular values, which keep the digits of a
-    # small A, where it counts.
     grid = np.arange(8 * count) / (8 * count)
-    rough = [
-        np.linalg.eigvalsh(block @ block.conj().T)[[0, -1]] for w in grid for block in blocks([w])
-    ]
-    low, high = np.array(rough).T
-    least, most, reach = grid[low.argmin()], grid[high.argmax()], 1 / (8 * count)
-    bounds = [np.inf, 0.0]
-    # A vanishes linearly in amplitude at a zero: twelve rounds of four close in on it to 1e-9.
-    for _ in range(12):
-        across = np.linspace(-reach, reach, 9)
-        low = extremes(least + across)[0]
-        high = extremes(most + across)[1]
-        least, most = least + across[low.argmin()], most + across[high.argmax()]
-        bounds = [min(bounds[0], low.min()), max(bounds[1], high.max())]
-        reach /= 4
-    return float(bounds[0]), float(bounds[1])
+    scanned = np.concatenate([extremes([w]) for w in grid], axis=1)
+    bounds = []
+    for side, best in ((0, scanned[0].argmin()), (1, scanned[1].argmax())):
+        value, sign = float(scanned[side, best]), (1, -1)[side]
+        # Eigenvalues are six times as fast; singular values keep the digits of a small A, which
+        # vanishes linearly in amplitude at a zero: twelve rounds of four close in on it to 1e-9.
+        exact = side == 0 and value < 1e-6 * scanned[1].max()
+        centre, reach = grid[best], 1 / (8 * count)
+        value = np.inf * sign if exact else value
+        for _ in range(12 if exact else 3):
+            across = centre + np.linspace(-reach, reach, 9)
+            values = extremes(across, exact)[side]
+            at = int((sign * values).argmin())
+            centre, reach = across[at], reach / 4
+            value = sign * min(sign * value, sign * float(values[at]))
+        bounds.append(float(value))
+    return bounds[0], bounds[1]
 
 
 def synthesis_stopband(driver, edge):

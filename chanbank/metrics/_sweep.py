@@ -99,18 +99,29 @@ def _cubic_weights(size, head, tail):
     for at, part in ((slice(None), 1 - head), (slice(None, None, -1), 1 - tail)):
         end = weights[at]
         end[1:4] += np.array([3 / 8, 7 / 6, 23 / 24]) - 1.0
-        # Lagrange polynomials on -1, 0, 1, 2, integrated from -part to 0.
-        for place, roots in enumerate(([0, 1, 2], [-1, 1, 2], [-1, 0, 2], [-1, 0, 1])):
-            polynomial = np.poly(roots) / np.polyval(np.poly(roots), place - 1)
-            end[place] -= np.polyval(np.polyint(polynomial), -part)
+        end[:4] -= _ENDS @ (-part) ** np.arange(4, -1, -1)
     return weights
+
+
+# Integrals of the Lagrange polynomials on -1, 0, 1, 2, from 0 on: coefficients of x^4 .. x^0.
+_ENDS = np.array(
+    [
+        np.polyint(np.poly(roots) / np.polyval(np.poly(roots), place))
+        for place, roots in (
+            (-1, [0, 1, 2]),
+            (0, [-1, 1, 2]),
+            (1, [-1, 0, 2]),
+            (2, [-1, 0, 1]),
+        )
+    ]
+)
 
 
 class Lines:
     """Powers of the swept channels against frequency, and the questions put to them."""
 
     def __init__(self, responses, driver, columns):
-        self.responses = responses
+        self.responses, self._bands = responses, {}
         self.power = responses.real**2 + responses.imag**2
         self.period = responses.shape[1]
         self.fold = self.period // driver.hop
@@ -119,7 +130,9 @@ class Lines:
 
     def band(self, low, high):
         """A `Band` between two frequencies in cycles per sample."""
-        return Band(low, high, self.period)
+        if (low, high) not in self._bands:
+            self._bands[low, high] = Band(low, high, self.period)
+        return self._bands[low, high]
 
     def shifted(self, row):
         """Offsets from a channel's centre in spacings, increasing, and its powers there."""

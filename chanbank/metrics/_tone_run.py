@@ -1,11 +1,13 @@
 """Single tones through the banks, several at once as antennas, every channel and frame kept."""
 
+from dataclasses import replace
+
 import numpy as np
 
 from chanbank.metrics._drive import Exact, tone
 from chanbank.metrics.tones import NoiseResponse, ToneResponse
 
-__all__ = ["run_noise", "run_pair_tones", "run_tones"]
+__all__ = ["run_noise", "run_pair_tones", "run_synthesis_noise", "run_tones"]
 
 # Frames averaged, and complex numbers held at a time.
 _FRAMES, _HELD = 48, 1 << 21
@@ -39,13 +41,26 @@ def run_tones(driver, frequencies):
 
 
 def run_noise(driver, seed):
-    """Frames of known white noise on two antennas, spread over every phase of the rotation."""
+    """Frames that known white noise on two antennas leaves the analysis bank with."""
     first, count = driver.settle() // 2 + 1, 6
-    length = (first + count) * driver.hop
-    empty = np.empty((2, 0, 0))
-    noise = NoiseResponse(seed, length, driver.real, first, driver.outputs, empty)
-    frames = driver.frames(noise.samples().astype(complex), first, count)
-    return NoiseResponse(seed, length, driver.real, first, driver.outputs, frames)
+    shape = (2, (first + count) * driver.hop)
+    noise = NoiseResponse(
+        seed, shape, driver.real, driver.absolute, first, driver.outputs, np.empty(0)
+    )
+    frames = driver.frames(noise.given().astype(complex), first, count)
+    return replace(noise, answer=frames)
+
+
+def run_synthesis_noise(driver, seed):
+    """Samples that known white frames on two antennas leave the synthesis bank with."""
+    reach = -(-driver.back.prototype.length // driver.hop)
+    count, first = reach + 6, reach // 2
+    shape = (2, count, len(driver.outputs))
+    noise = NoiseResponse(
+        seed, shape, False, driver.absolute, first * driver.hop, driver.outputs, np.empty(0)
+    )
+    samples = driver.synthesise(noise.given())[:, first * driver.hop :]
+    return replace(noise, answer=samples.astype(np.complex128))
 
 
 def run_pair_tones(driver, frequencies, analysed):

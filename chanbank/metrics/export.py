@@ -34,7 +34,7 @@ def report_to_dict(report):
         "leakage": report.leakage.to_dict(),
         "system": _system_to_dict(report.system),
         "tones": [tone.to_dict() for tone in report.tones],
-        "noise": None if report.noise is None else report.noise.to_dict(),
+        "noise": [noise.to_dict() for noise in report.noise],
         "notes": list(report.notes),
     }
 
@@ -70,7 +70,7 @@ def report_from_dict(held):
             plan.channels, system["lags"], system["impulse_responses"], system["pair_delay"]
         ),
         tones=[ToneResponse.from_dict(tone) for tone in held["tones"]],
-        noise=None if held["noise"] is None else NoiseResponse.from_dict(held["noise"]),
+        noise=[NoiseResponse.from_dict(noise) for noise in held["noise"]],
         floor_db=held["floor"]["value"],
         dtype=held["dtype"],
         notes=held["notes"],

@@ -6,7 +6,7 @@ from chanbank._checks import Integer, Optional, OwnCheck, checked, wrong_type, w
 from chanbank.metrics._drive import Driver
 from chanbank.metrics._measured_bank import measure_bank
 from chanbank.metrics._measured_channels import measure_channels
-from chanbank.metrics._tone_run import run_noise
+from chanbank.metrics._tone_run import run_noise, run_synthesis_noise
 from chanbank.metrics.figures import DEFINITIONS
 from chanbank.metrics.formula import OCCUPIED, occupied_bands
 from chanbank.metrics.report import BankReport, absent_figure
@@ -110,7 +110,9 @@ def measured_report(
     tested = _chosen(channels, driver, rng)
 
     figures, leakage, tones, notes = measure_channels(driver, tested, bands, edges, max_samples)
-    noise = run_noise(driver, seed)
+    noise = [run_noise(driver, seed)]
+    if synthesis is not None:
+        noise.append(run_synthesis_noise(driver, seed))
     found, system, tones, more = measure_bank(driver, tones, float(edges.max()), max_samples)
     figures |= found
     for name, definition in DEFINITIONS.items():

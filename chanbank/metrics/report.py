@@ -36,8 +36,9 @@ class BankReport:
         Both banks as one, with a synthesis prototype.
     tones : tuple of ToneResponse
         The tones that were run (measured reports).
-    noise : NoiseResponse or None
-        Frames of white noise, sample by sample known (measured reports).
+    noise : tuple of NoiseResponse
+        What the analysis bank, and the synthesis bank, made of known white noise (measured
+        reports).
     floor_db : float
         Levels below this, relative to the strongest signal, are rounding.
     dtype : str
@@ -69,7 +70,7 @@ class BankReport:
         leakage,
         system,
         tones=(),
-        noise=None,
+        noise=(),
         floor_db,
         dtype,
         notes=(),
@@ -83,7 +84,7 @@ class BankReport:
             array.flags.writeable = False
         self.figures = {name: figures[name] for name in DEFINITIONS}
         self.leakage, self.system, self.tones = leakage, system, tuple(tones)
-        self.noise = noise
+        self.noise = tuple(noise)
         self.floor_db, self.dtype, self.notes = float(floor_db), dtype, tuple(notes)
 
     def __getitem__(self, name):

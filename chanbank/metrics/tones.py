@@ -68,56 +68,68 @@ class ToneResponse:
 
 @dataclass(frozen=True)
 class NoiseResponse:
-    """Some frames of an analysis bank fed with white noise of which every sample is known.
+    """What a bank made of white noise of which every sample is known.
+
+    An analysis bank is fed with samples and answers with frames, a synthesis bank the other way.
 
     Attributes
     ----------
     seed : int
-        `samples` makes the input again.
-    length : int
-        Samples pushed.
+        `given` makes the input again.
+    shape : tuple of int
+        Of the input: (antennas, samples) or (antennas, frames, channels).
     real : bool
-        Whether they are real.
+        Whether the input is real.
+    absolute : bool
+        Whether frames given to a synthesis bank have absolute phase.
     first : int
-        Index of the first frame held.
+        Index of the first frame, or sample, held.
     channels : numpy.ndarray
-        The output channels.
-    frames : numpy.ndarray
-        complex128, shape (antennas, frames, channels): frame phase, antenna by antenna.
+        The channels.
+    answer : numpy.ndarray
+        complex128: frames with frame phase (antennas, frames, channels), or samples
+        (antennas, samples).
     """
 
     seed: int
-    length: int
+    shape: tuple
     real: bool
+    absolute: bool
     first: int
     channels: np.ndarray
-    frames: np.ndarray
+    answer: np.ndarray
 
-    def samples(self):
-        """The input, shape (antennas, length): signs, or quarter turns for complex samples."""
-        rng = np.random.default_rng([self.seed, self.length])
-        shape = (len(self.frames), self.length)
+    def given(self):
+        """The input: signs, or quarter turns where it is complex."""
+        rng = np.random.default_rng([self.seed, *self.shape])
         if self.real:
-            return rng.integers(0, 2, shape) * 2.0 - 1.0
-        return np.array([1, 1j, -1, -1j])[rng.integers(0, 4, shape)]
+            return rng.integers(0, 2, self.shape) * 2.0 - 1.0
+        return np.array([1, 1j, -1, -1j])[rng.integers(0, 4, self.shape)]
 
     def to_dict(self):
         """JSON-safe."""
         return {
             "seed": self.seed,
-            "length": self.length,
+            "shape": list(self.shape),
             "real": self.real,
+            "absolute": self.absolute,
             "first": self.first,
             "channels": self.channels.tolist(),
-            "frames": _split(self.frames),
+            "answer": _split(self.answer),
         }
 
     @classmethod
     def from_dict(cls, held):
         """Rebuild what `to_dict` gave."""
-        frames = _joined(held["frames"])
-        names = ("seed", "length", "real", "first")
-        return cls(*(held[name] for name in names), np.array(held["channels"]), frames)
+        return cls(
+            held["seed"],
+            tuple(held["shape"]),
+            held["real"],
+            held["absolute"],
+            held["first"],
+            np.array(held["channels"]),
+            _joined(held["answer"]),
+        )
 
 
 def _split(values):

@@ -1,21 +1,14 @@
 """Two reports of one bank held against each other, and measured tones against coefficients."""
 
 from dataclasses import dataclass
-from fractions import Fraction
 
 import numpy as np
 
 from chanbank._checks import wrong_type
-from chanbank.metrics._spectrum import complex_comb
+from chanbank.metrics._kernel_checks import Comparison, kernel_checks
 from chanbank.metrics.figures import DEFINITIONS
 
 __all__ = ["ReportDisagreement", "Verification", "verify_reports"]
-
-# Rounding of one output is near eps (abs(H) + rms of H over channels + norm(h)): a fold of P
-# products, a DFT of log2 M stages whose error spreads over all channels, and taps rounded once.
-# The mean over frames shares what is systematic, single frames reach further; a pair adds both
-# banks' share.
-_MEAN_EPSILONS, _FRAME_EPSILONS, _PAIR_EPSILONS, _NOISE_EPSILONS = 8.0, 16.0, 24.0, 12.0
 
 # Group delays come from differences of phase: absolute slack in samples.
 _DELAY_SLACK = 0.05
@@ -33,35 +26,6 @@ class ReportDisagreement(ValueError):
     def __init__(self, text, verification):
         super().__init__(text)
         self.verification = verification
-
-
-@dataclass(frozen=True)
-class Comparison:
-    """One line of a verification.
-
-    Attributes
-    ----------
-    what : str
-        Name of a figure, or of a check of tones.
-    compared : int
-        Values compared.
-    difference : float
-        The largest difference found, in `unit`.
-    allowed : float
-        What was allowed there.
-    unit : str
-    at : str
-        Where it was found.
-    agreed : bool
-    """
-
-    what: str
-    compared: int
-    difference: float
-    allowed: float
-    unit: str
-    at: str
-    agreed: bool
 
 
 @dataclass(frozen=True)
@@ -125,10 +89,7 @@ def verify_reports(one, other, *, tolerance_db):
         else:
             lines.append(line)
     for measured, known in ((one, other), (other, one)):
-        if measured.tones:
-            lines += _compare_tones(measured, known)
-        if measured.noise is not None:
-            lines.append(_compare_noise(measured, known))
+        lines += kernel_checks(measured, known)
     result = Verification(tuple(lines), tuple(skipped))
     if not result.agreed:
         bad = [line for line in result.lines if not line.agreed]
@@ -201,113 +162,3 @@ def _distance(name, unit, ours, theirs, tolerance, floor, report):
     difference = np.where(close, np.minimum(difference, tolerance), difference)
     allowed = np.full(len(difference), float(tolerance))
     return difference, allowed, "dB"
-
-
-def _compare_tones(measured, known):
-    """Responses of every tone in every channel and frame against the coefficients."""
-    plan = known.plan
-    epsilon = float(np.finfo(np.dtype(measured.dtype)).eps)
-    taps = known.prototype.taps
-    spread = float(np.sqrt((taps**2).sum()))
-    checks = {
-        "tone responses": [0, 0.0, 1.0, ""],
-        "tone frames": [0, 0.0, 1.0, ""],
-        "tones through the pair": [0, 0.0, 1.0, ""],
-        "pair samples": [0, 0.0, 1.0, ""],
-    }
-
-    def note(what, differences, allowed, place):
-        entry = checks[what]
-        entry[0] += len(differences)
-        at = int(np.argmax(differences / allowed))
-        if differences[at] / allowed[at] >= entry[1] / entry[2]:
-            entry[1:] = [float(differences[at]), float(allowed[at]), place(at)]
-
-    for tone in measured.tones:
-        index = plan.dft_index[tone.channels]
-        # Exact until the last: the tone in spacings from the nearest centre, -1/2 to 1/2.
-        spacings = Fraction(tone.frequency) * plan.channels - plan.exact_offset
-        nearest = round(spacings)
-        shift = float(spacings - nearest)
-        every = next(complex_comb(taps, plan.channels, plan.channels, [shift]))[1]
-        every = every[0]
-        predicted = every[(nearest - index) % plan.channels]
-        level = np.abs(predicted) + np.sqrt(np.mean(np.abs(every) ** 2)) + spread
-        if plan.real:
-            # A real tone brings its mirror image, which leaves only with cosine and sine together.
-            mirrored = -spacings - 2 * plan.exact_offset
-            turned = float(mirrored - round(mirrored))
-            other = next(complex_comb(taps, plan.channels, plan.channels, [turned]))[1][0]
-            level += np.abs(other[(round(mirrored) - index) % plan.channels])
-        # A loud channel leaves spurs of a fraction of an epsilon: the DFT's constants are rounded.
-        level += np.abs(every).max() / _MEAN_EPSILONS
-        # The prediction itself: phases of up to P turns in double precision.
-        own = 4 * np.finfo(float).eps * known.prototype.taps_per_branch * np.abs(taps).sum()
-        scale = epsilon * level + own / _MEAN_EPSILONS
-
-        def place(at, tone=tone):
-            return f"channel {int(tone.channels[at])}, tone {tone.frequency:.9g} cycles/sample"
-
-        note("tone responses", np.abs(tone.responses - predicted), _MEAN_EPSILONS * scale, place)
-        note("tone frames", tone.residuals, _FRAME_EPSILONS * scale, place)
-        if tone.pair is None or known.system is None:
-            continue
-        expected = known.system.responses([shift % 1.0])[:, 0]
-        gain = 1.0
-        if known["noise_gain"].present:
-            gain = max(1.0, 10 ** (float(known["noise_gain"].values) / 20))
-        allowed = _PAIR_EPSILONS * epsilon * gain * (1 + np.abs(expected).max())
-
-        def phase(at, tone=tone):
-            return f"output phase {at}, tone {tone.frequency:.9g} cycles/sample"
-
-        full = np.full(len(expected), allowed)
-        note("tones through the pair", np.abs(tone.pair - expected), full, phase)
-        note("pair samples", np.array([tone.pair_residual]), full[:1], phase)
-    return [
-        Comparison(what, count, difference, allowed, "amplitude", at, difference <= allowed)
-        for what, (count, difference, allowed, at) in checks.items()
-        if count
-    ]
-
-
-def _compare_noise(measured, known):
-    """Frames of white noise against the double-precision sum over the coefficients.
-
-    Noise is as loud in every channel, so that the floor is eps norm(h) everywhere: a single tap
-    off by a thousandth of the largest stands out at any number of channels.
-    """
-    noise, plan, taps = measured.noise, known.plan, known.prototype.taps
-    channels, hop = plan.channels, plan.hop
-    branches = known.prototype.taps_per_branch
-    size = branches * channels
-    index = np.arange(size)
-    turns = np.exp(2j * np.pi * (float(plan.exact_offset % channels) * index / channels))
-    weights = np.zeros(size, np.complex128)
-    weights[: len(taps)] = taps
-    weights *= turns
-    samples = np.pad(noise.samples(), [(0, 0), (size, 0)])
-    bins = plan.dft_index[noise.channels]
-    differences = []
-    for frame in range(noise.frames.shape[1]):
-        newest = size + (noise.first + frame) * hop
-        window = samples[:, newest - size + 1 : newest + 1][:, ::-1] * weights
-        folded = window.reshape(len(samples), branches, channels).sum(axis=1)
-        expected = np.fft.ifft(folded, axis=1) * channels
-        differences.append(np.abs(noise.frames[:, frame] - expected[:, bins]))
-    differences = np.array(differences)
-    epsilon = float(np.finfo(np.dtype(measured.dtype)).eps)
-    # The prediction's own phases, of up to P turns, are rounded to double precision.
-    epsilon = _NOISE_EPSILONS * epsilon + 4 * float(np.finfo(float).eps) * branches
-    allowed = epsilon * float(np.sqrt((taps**2).sum()))
-    frame, antenna, channel = np.unravel_index(differences.argmax(), differences.shape)
-    largest = float(differences[frame, antenna, channel])
-    return Comparison(
-        "noise frames",
-        differences.size,
-        largest,
-        allowed,
-        "amplitude",
-        f"channel {int(noise.channels[channel])}, antenna {antenna}, frame {noise.first + frame}",
-        largest <= allowed,
-    )

@@ -287,7 +287,7 @@ def test_raised_cosine_pair_has_no_distortion_but_its_truncation(taps_per_branch
     known = np.abs(np.exp(-2j * np.pi * np.outer(frequencies, at / channels)) @ lags)
     ripple = 20 * np.log10(known.max() / known.min())
     assert report.distortion_ripple == pytest.approx(ripple, abs=1e-4)
-    assert report.distortion_ripple < 0.06
+    assert report.distortion_ripple < 0.2
 
 
 def test_frame_bounds_of_windows():

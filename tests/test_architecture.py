@@ -21,6 +21,7 @@ ROOMS = [
     "prototype",
     "plan",
     "recordings",
+    "_blas",
     "_files",
     "_checks",
 ]

@@ -4,6 +4,7 @@ import math
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Instance, Integer, Optional, Real, checked
 from chanbank.plan import ChannelPlan
 from chanbank.prototype._joint_design import JointProblem, lead_tight, stopband_edge
@@ -32,6 +33,7 @@ _SCHEDULES = (
     taps_per_branch=Integer(1, 32),
     stopband=Optional(Real(above=0, unit="channel spacings")),
 )
+@one_blas_thread
 def tight_prototype(plan, taps_per_branch, *, stopband=None):
     """A linear-phase prototype that is its own dual: the bank is a tight frame.
 

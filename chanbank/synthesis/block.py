@@ -5,6 +5,7 @@ import math
 import numpy as np
 import scipy.linalg
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Choice, Instance, Integer, Optional, OwnCheck, Real, checked
 from chanbank.plan import ChannelPlan
 from chanbank.prototype._measure import decibels
@@ -108,6 +109,7 @@ class BlockInverse:
         regularisation=Real(0, 1),
         phase=Choice("absolute", "frame"),
     )
+    @one_blas_thread
     def __init__(
         self, plan, prototype, frames, *, length=None, regularisation=0.0, phase="absolute"
     ):
@@ -219,6 +221,7 @@ class BlockInverse:
         ),
         first_frame=Integer(),
     )
+    @one_blas_thread
     def __call__(self, frames, first_frame=0):
         """The samples that a block of frames came from.
 

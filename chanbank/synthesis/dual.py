@@ -4,6 +4,7 @@ import math
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Boolean, Choice, Instance, Integer, Optional, Real, checked
 from chanbank.plan import ChannelPlan
 from chanbank.prototype._measure import decibels
@@ -28,6 +29,7 @@ _GAIN_LIMIT = 12.0  # dB: an exact dual noisier than this is not offered unless 
     stopband=Optional(Real(above=0, unit="channel spacings")),
     pair_delay=Optional(Integer(0)),
 )
+@one_blas_thread
 def dual_prototype(
     plan,
     prototype,

@@ -8,6 +8,7 @@ import scipy.linalg
 import scipy.sparse
 from scipy.optimize import minimize_scalar
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Instance, checked
 from chanbank.plan import ChannelPlan
 from chanbank.prototype._measure import decibels
@@ -60,6 +61,7 @@ class FrameBounds:
 
 
 @checked(plan=Instance(ChannelPlan), prototype=Instance(Prototype))
+@one_blas_thread
 def frame_bounds(plan, prototype):
     """Frame bounds and condition number of the analysis bank of any plan and prototype.
 

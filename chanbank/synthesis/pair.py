@@ -5,6 +5,7 @@ import numbers
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import (
     Boolean,
     Instance,
@@ -49,6 +50,7 @@ _RELAXED = 30.0  # dB: what g's stopband may give up in a design whose g is corr
     passband=Real(above=0, high=0.5, unit="channel spacings"),
     stopband=Optional(Real(above=0, unit="channel spacings")),
 )
+@one_blas_thread
 def prototype_pair(
     plan,
     taps_per_branch,

@@ -3,7 +3,7 @@
 import numpy as np
 import pyfftw
 
-from chanbank._engine.planning import TIME_LIMIT, measured, planning
+from chanbank._engine.planning import effort, planning
 
 __all__ = ["BatchDft"]
 
@@ -29,14 +29,14 @@ class BatchDft:
             bins = pyfftw.zeros_aligned((batch, spectrum), dtype, n=64)
             forward = kind in ("forward", "real")
             source, target = (wave, bins) if forward else (bins, wave)
-            effort = "FFTW_MEASURE" if measured(channels) else "FFTW_ESTIMATE"
+            flag, seconds = effort(channels)
             self._plan = pyfftw.FFTW(
                 source,
                 target,
                 axes=(1,),
                 direction="FFTW_FORWARD" if forward else "FFTW_BACKWARD",
-                flags=(effort, "FFTW_DESTROY_INPUT"),
-                planning_timelimit=TIME_LIMIT,
+                flags=(flag, "FFTW_DESTROY_INPUT"),
+                planning_timelimit=seconds,
             )
         self.wide.fill(0)
         source.fill(0)

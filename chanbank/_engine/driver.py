@@ -81,36 +81,61 @@ def _bank_at(typingctx, address):
 
 
 @njit(nogil=True, error_model="numpy")
-def _stage(variant, bank, table, samples, begin, end):
+def _stage(variant, bank, table, samples, own, begin, end):
     """Samples begin .. end - 1 (absolute) of a push into the ring.
 
     `samples` is (code of the dtype, numbers per sample, address, absolute index of the first
-    sample, zero, scale), integers standing for (value - zero) * scale.
+    sample, zero, scale), integers standing for (value - zero) * scale. Rows own[0] .. own[1] - 1
+    need no conversion and are wholly in the caller's array for the time of the push: the table
+    is pointed there, and nothing is copied.
     """
     code, given, source, origin, zero, scale = samples
     sample_bytes = bank.held * lane_bytes(variant)
     mixer = (bank.mix_high, bank.mix_low, bank.mix_table)
-    rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
+    size = bank.ring_rows
+    # The rows' addresses, twice over, and where the ring keeps each row.
+    rows = carray(address_as_pointer(table), (3 * size,), np.int64)
     time = begin
     while time < end:
         row = time // bank.channels
         column = time - row * bank.channels
         count = min(bank.channels - column, end - time)
-        stage_run(
-            variant,
-            code,
-            rows[row % bank.ring_rows] + column * sample_bytes,
-            source,
-            time - origin,
-            count,
-            given,
-            bank.held,
-            zero,
-            scale,
-            mixer,
-            time,
-        )
+        place = row % size
+        if own[0] <= row < own[1]:
+            address = source + (row * bank.channels - origin) * sample_bytes
+        else:
+            address = rows[place + 2 * size]
+            stage_run(
+                variant,
+                code,
+                address + column * sample_bytes,
+                source,
+                time - origin,
+                count,
+                given,
+                bank.held,
+                zero,
+                scale,
+                mixer,
+                time,
+            )
+        rows[place] = rows[place + size] = address
         time += count
+
+
+@njit(nogil=True, error_model="numpy")
+def _own_rows(variant, bank, code, given, begin, end):
+    """Which rows may stay in the caller's array: all within the push, but for the last ones.
+
+    Those must outlive the push in the ring. A vector that runs over a row's end still reads
+    within the array.
+    """
+    plain = 0 < code < 5 and NUMBER_BYTES[code] == lane_bytes(variant)
+    if not plain or given != bank.held or bank.mix_table != 0:
+        return 0, 0
+    over = VECTOR_BYTES // (bank.held * lane_bytes(variant))
+    first = -(-begin // bank.channels)
+    return first, min(end // bank.channels - bank.rows, (end - over) // bank.channels)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -207,7 +232,7 @@ def analysis_run(lane, real, step):
     ):
         """Take samples begin .. end - 1, deliver frames first .. last - 1.
 
-        `table` holds the addresses of the ring's rows, twice over; the operands from `code` on are
+        `table` is the ring's (see `_stage`); the operands from `code` on are
         those of `_stage` and `_deliver`.
         """
         variant = make_variant(lane, real, step)
@@ -215,13 +240,14 @@ def analysis_run(lane, real, step):
         samples = (code, given, source, origin, zero, scale)
         result = (target, frame_stride, column_stride, stream)
         sample_bytes = given * NUMBER_BYTES[code]
+        own = _own_rows(variant, bank, code, given, begin, end)
         time, frame = begin, first
         while frame < last:
             count = min(bank.block, last - frame)
             newest = (frame + count - 1) * bank.hop + 1
-            _stage(variant, bank, table, samples, time, newest)
+            _stage(variant, bank, table, samples, own, time, newest)
             time = newest
-            ahead = source + (time - origin) * sample_bytes if code != 0 else 0
+            ahead = source + (time - origin) * sample_bytes
             soon = ahead + min(bank.block * bank.hop, end - time) * sample_bytes
             fold_block(variant, bank, table, frame, count, ahead, soon)
             for start in range(0, count, bank.gather):
@@ -229,7 +255,7 @@ def analysis_run(lane, real, step):
                 _transform(variant, bank, frame, start, size)
                 _deliver(variant, bank, result, frame + start - first, size)
             frame += count
-        _stage(variant, bank, table, samples, time, end)
+        _stage(variant, bank, table, samples, own, time, end)
         if stream != 0:
             fence()
         return sources

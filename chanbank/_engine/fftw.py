@@ -14,12 +14,13 @@ import numpy as np
 import pyfftw.pyfftw
 
 from chanbank._engine.buffers import aligned_bytes
-from chanbank._engine.planning import TIME_LIMIT, measured, planning
+from chanbank._engine.planning import effort, planning
 
 __all__ = ["Plan", "available", "make_plan"]
 
 _FORWARD, _BACKWARD = -1, 1
-_MEASURE, _DESTROY_INPUT, _ESTIMATE = 0, 1 << 0, 1 << 6
+_DESTROY_INPUT = 1 << 0
+_EFFORTS = {"FFTW_MEASURE": 0, "FFTW_PATIENT": 1 << 5, "FFTW_ESTIMATE": 1 << 6}
 
 _plans = weakref.WeakValueDictionary()
 
@@ -68,14 +69,14 @@ class Plan:
         suffix = {"real": "_r2c", "real-inverse": "_c2r"}.get(kind, "")
         planner = getattr(_library, f"{self._prefix}plan_guru64_dft{suffix}")
         self.execute = _address(getattr(_library, f"{self._prefix}execute_dft{suffix}"))
-        effort = _MEASURE if measured(points) else _ESTIMATE
+        flag, seconds = effort(points)
         # Planning destroys what its arrays hold: it works on arrays of its own.
         source, target = aligned_bytes(rows * source_stride), aligned_bytes(rows * target_stride)
         sign = () if suffix else (_BACKWARD if kind == "inverse" else _FORWARD,)
         places = (ctypes.c_void_p(source.ctypes.data), ctypes.c_void_p(target.ctypes.data))
-        flags = ctypes.c_uint(effort | _DESTROY_INPUT)
+        flags = ctypes.c_uint(_EFFORTS[flag] | _DESTROY_INPUT)
         limit = getattr(_library, f"{self._prefix}set_timelimit")
-        limit(ctypes.c_double(TIME_LIMIT))
+        limit(ctypes.c_double(-1.0 if seconds is None else seconds))
         self.address = planner(
             1, ctypes.byref(length), 1, ctypes.byref(batch), *places, *sign, flags
         )

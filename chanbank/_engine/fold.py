@@ -17,85 +17,71 @@ from numba.extending import intrinsic
 
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes
 
-__all__ = ["TILE", "fold_block", "fold_rows"]
+__all__ = ["LINE", "TILE", "fold_block", "fold_rows"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
 # Columns (in vectors) folded for all frames before going on: the rows' pieces and their taps stay
-# near, in the first-level cache for few frames and in the second for many.
-TILE = 4096 // VECTOR_BYTES
+# in the first-level cache.
+TILE = 1024 // VECTOR_BYTES
 
-_HALF = VECTOR_BYTES // 2
-_LINE = 64  # bytes
+LINE = 64  # bytes
 
 
 @intrinsic(prefer_literal=True)
-def _fold_group(
-    typingctx,
-    variant,
-    together,
-    rows,
-    column,
-    step,
-    taps,
-    tap_stride,
-    count,
-    out,
-    stride,
-    vectors,
-    ahead,
-):
+def _fold_group(typingctx, variant, together, rows, taps, out, vectors, fetch):
     """out[f] = sum over p < count of row[p + f*step] * taps[p], f < together, oldest row first.
 
-    `rows` is where the table holds the address of the oldest row, `column` the byte offset of the
-    first column in it; `taps` and `out` are addresses, `tap_stride` and `stride` bytes. From
-    `ahead` on (0: none) one cache line per vector and frame is fetched into the second-level cache.
+    Operands as in `fold_rows`, but that `rows` begins with the place in the table.
     """
     frames = together.literal_value
 
     def codegen(context, builder, signature, args):
-        _, _, rows, first_column, step, taps, tap_stride, count, out, stride, vectors, ahead = args
         lanes = Lanes(builder, variant.lane)
+        _, _, rows, taps, out, vectors, fetch = args
+        entry, column, step = lanes.parts(rows)
+        tap, tap_stride, count = lanes.parts(taps)
+        place, stride = lanes.parts(out)
+        soon, apart = lanes.parts(fetch)
         sums = [cgutils.alloca_once(builder, lanes.full) for _ in range(frames)]
         with cgutils.for_range(builder, vectors) as loop:
             along = lanes.times(loop.index, VECTOR_BYTES)
-            tap = lanes.add(taps, along if variant.real else lanes.times(loop.index, _HALF))
-            column = lanes.add(first_column, along)
-            with builder.if_then(builder.icmp_unsigned("!=", ahead, lanes.index(0))):
-                line = lanes.add(ahead, lanes.times(loop.index, frames * _LINE))
+            tap_along = along if variant.real else lanes.times(loop.index, VECTOR_BYTES // 2)
+            with builder.if_then(builder.icmp_unsigned("!=", soon, lanes.index(0))):
+                line = lanes.add(soon, lanes.times(loop.index, LINE))
                 for frame in range(frames):
-                    lanes.prefetch(lanes.add(line, frame * _LINE))
+                    lanes.prefetch(lanes.add(line, lanes.times(apart, frame)))
             for total in sums:
                 builder.store(lanes.zero(), total)
+            here = lanes.add(tap, tap_along), tap_stride, lanes.add(column, along), step
             whole = _CHUNKS[0]
             chunks = builder.udiv(count, lanes.index(whole))
             with cgutils.for_range(builder, chunks) as chunk:
                 first = lanes.times(chunk.index, whole)
-                _add_chunk(lanes, variant, whole, sums, rows, tap, tap_stride, first, column, step)
+                _add_chunk(lanes, variant, whole, sums, entry, first, here)
             first = lanes.times(chunks, whole)
             for size in _CHUNKS[1:]:
                 bit = builder.and_(count, lanes.index(size))
                 with builder.if_then(builder.icmp_unsigned("!=", bit, lanes.index(0))):
-                    _add_chunk(
-                        lanes, variant, size, sums, rows, tap, tap_stride, first, column, step
-                    )
+                    _add_chunk(lanes, variant, size, sums, entry, first, here)
                 first = lanes.add(first, bit)
             for frame, total in enumerate(sums):
-                place = lanes.add(lanes.add(out, lanes.times(stride, frame)), along)
-                lanes.store(builder.load(total), place)
+                address = lanes.add(place, lanes.times(stride, frame))
+                lanes.store(builder.load(total), lanes.add(address, along))
         return context.get_dummy_value()
 
-    return types.void(variant, together, *[types.int64] * 10), codegen
+    return types.void(variant, together, rows, taps, out, vectors, fetch), codegen
 
 
-def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column, step):
+def _add_chunk(lanes, variant, size, sums, entry, first, here):
     """Add `size` consecutive rows to every sum, each frame's oldest first.
 
     The taps are loaded once for all frames. Where the frames' distance is known, a row that
     serves several frames is loaded once as well.
     """
     builder = lanes.builder
+    tap, tap_stride, column, step = here
     weights = []
     for p in range(size):
         address = lanes.add(tap, lanes.times(lanes.add(first, p), tap_stride))
@@ -103,10 +89,10 @@ def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column,
             weights.append(lanes.load(address))
         else:
             weights.append(lanes.doubled(lanes.load(address, lanes.half)))
-    table = lanes.add(rows, lanes.times(first, 8))
+    table = lanes.add(entry, lanes.times(first, 8))
 
-    def row(entry):
-        start = lanes.load(lanes.add(table, entry), INDEX, 8)
+    def row(offset):
+        start = lanes.load(lanes.add(table, offset), INDEX, 8)
         return lanes.load(lanes.add(start, column))
 
     totals = [builder.load(total) for total in sums]
@@ -128,102 +114,49 @@ def _add_chunk(lanes, variant, size, sums, rows, tap, tap_stride, first, column,
 
 
 @njit(nogil=True, error_model="numpy")
-def fold_rows(
-    variant, table, row, step, column, taps, tap_stride, count, out, stride, frames, vectors, ahead
-):
+def fold_rows(variant, rows, taps, out, frames, vectors, fetch):
     """Fold `vectors` vectors of columns for `frames` frames that lie `step` rows apart.
 
-    `row` is the first frame's oldest row, `column` the byte offset of the first column, `taps` the
-    address of its oldest tap, `out` of the first frame's result. Returns the next address to
-    prefetch (see `fold_block`).
+    All operands are addresses and bytes: `rows` is (table of the rows' addresses, the first
+    frame's oldest row, the first column, step), `taps` (its oldest tap, from row to row, rows),
+    `out` (the first frame's result, from frame to frame). For every vector and frame one cache
+    line is fetched ahead: `fetch` is (the first, from frame to frame), 0 to fetch nothing.
     """
+    table, row, column, step = rows
+    place, stride = out
+    soon, apart = fetch
     frame = 0
     while frame < frames:
-        rows = table + 8 * (row + frame * step)
-        here = out + frame * stride
+        entry = (table + 8 * (row + frame * step), column, step)
+        here = (place + frame * stride, stride)
+        ahead = (soon + frame * apart if soon != 0 else 0, apart)
         left = frames - frame
         if left >= 8:
-            size = 8
-            _fold_group(
-                variant,
-                8,
-                rows,
-                column,
-                step,
-                taps,
-                tap_stride,
-                count,
-                here,
-                stride,
-                vectors,
-                ahead,
-            )
+            _fold_group(variant, 8, entry, taps, here, vectors, ahead)
+            frame += 8
         elif left >= 4:
-            size = 4
-            _fold_group(
-                variant,
-                4,
-                rows,
-                column,
-                step,
-                taps,
-                tap_stride,
-                count,
-                here,
-                stride,
-                vectors,
-                ahead,
-            )
+            _fold_group(variant, 4, entry, taps, here, vectors, ahead)
+            frame += 4
         elif left >= 2:
-            size = 2
-            _fold_group(
-                variant,
-                2,
-                rows,
-                column,
-                step,
-                taps,
-                tap_stride,
-                count,
-                here,
-                stride,
-                vectors,
-                ahead,
-            )
+            _fold_group(variant, 2, entry, taps, here, vectors, ahead)
+            frame += 2
         else:
-            size = 1
-            _fold_group(
-                variant,
-                1,
-                rows,
-                column,
-                step,
-                taps,
-                tap_stride,
-                count,
-                here,
-                stride,
-                vectors,
-                ahead,
-            )
-        frame += size
-        if ahead != 0:
-            ahead += vectors * size * _LINE
-    return ahead
+            _fold_group(variant, 1, entry, taps, here, vectors, ahead)
+            frame += 1
 
 
 @njit(nogil=True, error_model="numpy")
 def fold_block(variant, bank, table, first, count, ahead, ahead_end):
     """Fold frames first .. first + count - 1, those that are whole rows apart together.
 
-    While it computes it prefetches the samples of the next block, from `ahead` on (0: none), so
-    that staging them will not wait for memory.
+    While it computes it fetches the samples of the next block, from `ahead` to `ahead_end`, so
+    that they need not be waited for.
     """
     sample_bytes = bank.held * lane_bytes(variant)
     tap_bytes = lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
     tile = TILE * per_vector
-    stride = bank.cycle * bank.folded_stride
+    nothing = (np.int64(0), np.int64(0))
     for start in range(0, bank.channels, tile):
         stop = min(start + tile, bank.channels)
         for member in range(min(bank.cycle, count)):
@@ -231,67 +164,43 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
             newest = (first + member) * bank.hop
             row = newest // bank.channels
             split = newest - row * bank.channels + 1
-            out = bank.folded + member * bank.folded_stride
-            if ahead >= ahead_end:
-                ahead = 0
+            place = bank.folded + member * bank.folded_stride
+            stride = bank.cycle * bank.folded_stride
             # Columns before the split, then those behind it, which belong to one row earlier. The
             # last vector of the first part may run over the split; the second part starts with a
             # vector at the split itself and goes on aligned. Overlapping columns are computed
             # twice, to the same bits.
-            if start < split:
-                oldest = (row - bank.rows + 1) % bank.ring_rows
-                taps = bank.taps + (bank.channels - split + start) * tap_bytes
-                vectors = -(-(min(split, stop) - start) // per_vector)
-                ahead = fold_rows(
+            if split < stop:
+                aligned = -(-split // per_vector) * per_vector
+            else:
+                aligned = stop
+            for part in range(3):
+                if part == 0:
+                    column, end = start, min(split, stop)
+                    taps = bank.channels - split + column
+                elif part == 1:
+                    column, end = split, min(split + 1, aligned)
+                    if split < start:
+                        continue
+                    taps = np.int64(0)
+                else:
+                    column, end = max(start, aligned), stop
+                    taps = column - split
+                if column >= end:
+                    continue
+                oldest = (row - bank.rows + (1 if part == 0 else 0)) % bank.ring_rows
+                vectors = -(-(end - column) // per_vector)
+                fetch = nothing
+                if ahead < ahead_end:
+                    fetch = (ahead, vectors * LINE)
+                    ahead += frames * vectors * LINE
+                offset = column * sample_bytes
+                fold_rows(
                     variant,
-                    table,
-                    oldest,
-                    bank.step,
-                    start * sample_bytes,
-                    taps,
-                    bank.tap_stride,
-                    bank.rows,
-                    out + start * sample_bytes,
-                    stride,
+                    (table, oldest, offset, bank.step),
+                    (bank.taps + taps * tap_bytes, bank.tap_stride, bank.rows),
+                    (place + offset, stride),
                     frames,
                     vectors,
-                    ahead,
+                    fetch,
                 )
-            if split < stop:
-                oldest = (row - bank.rows) % bank.ring_rows
-                aligned = -(-split // per_vector) * per_vector
-                if start < split < aligned:
-                    fold_rows(
-                        variant,
-                        table,
-                        oldest,
-                        bank.step,
-                        split * sample_bytes,
-                        bank.taps,
-                        bank.tap_stride,
-                        bank.rows,
-                        out + split * sample_bytes,
-                        stride,
-                        frames,
-                        np.int64(1),
-                        np.int64(0),
-                    )
-                column = max(start, aligned)
-                if column < stop:
-                    taps = bank.taps + (column - split) * tap_bytes
-                    vectors = -(-(stop - column) // per_vector)
-                    ahead = fold_rows(
-                        variant,
-                        table,
-                        oldest,
-                        bank.step,
-                        column * sample_bytes,
-                        taps,
-                        bank.tap_stride,
-                        bank.rows,
-                        out + column * sample_bytes,
-                        stride,
-                        frames,
-                        vectors,
-                        ahead,
-                    )

@@ -164,6 +164,10 @@ class Lanes:
         right = self.index(right) if isinstance(right, int) else right
         return self.builder.mul(left, right)
 
+    def parts(self, pair):
+        """The members of a tuple operand."""
+        return [self.builder.extract_value(pair, i) for i in range(pair.type.count)]
+
     def zero(self):
         return ir.Constant(self.full, [0.0] * self.width)
 

@@ -143,7 +143,7 @@ class NumbaAnalysisEngine:
                     start = marks[part] * hop - layout.window + 1
                     begin = max(origin, start)
                     if start < origin:
-                        here.memory[...] = ring.memory
+                        here.copy_from(ring)
                 stop = end if part == parts - 1 else (marks[part + 1] - 1) * hop + 1
                 jobs.append((antenna, here, (begin, stop, marks[part], marks[part + 1])))
             used = [job[1] for job in jobs[-parts:]]
@@ -183,7 +183,7 @@ class _Layout:
         bins = channels if self.paired else channels // 2 + 1
         self.bins_stride = odd_lines(bins * 2 * self.lane)
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle)
+        frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)

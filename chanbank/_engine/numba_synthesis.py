@@ -118,7 +118,7 @@ class NumbaSynthesisEngine:
                     here = self.spare.pop(0)
                     begin = max(first, marks[part] - layout.reach + 1)
                     if begin == first:
-                        here.memory[...] = ring.memory
+                        here.copy_from(ring)
                 jobs.append((antenna, here, (begin, marks[part], marks[part + 1])))
             used = [job[1] for job in jobs[-parts:]]
             self.spare += used[:-1]
@@ -162,7 +162,7 @@ class _Layout:
         self.given_stride = odd_lines(self.bins * 2 * self.lane)
         self.summed_stride = odd_lines(hop * self.held * self.lane)
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle)
+        frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.reach + self.block

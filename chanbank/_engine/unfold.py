@@ -18,7 +18,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.compiling import compiled
 from chanbank._engine.driver import execute_plan, record, source_digest
-from chanbank._engine.fold import TILE, fold_rows
+from chanbank._engine.fold import LINE, TILE, fold_rows
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
@@ -152,28 +152,25 @@ def _unfold(variant, bank, table, first, count, ahead, ahead_end):
             column = (newest * bank.hop - bank.delay) % bank.channels
             split = bank.channels - column
             out = bank.summed + member * bank.summed_stride
-            if ahead >= ahead_end:
-                ahead = 0
             begin = start
             for _part in range(2):
                 end = min(stop, split) if begin < split else stop
                 if begin >= end:
                     continue
                 shift = column if begin < split else column - bank.channels
-                ahead = fold_rows(
+                vectors = -(-(end - begin) // per_vector)
+                fetch = (np.int64(0), np.int64(0))
+                if ahead < ahead_end:
+                    fetch = (ahead, vectors * LINE)
+                    ahead += hops * vectors * LINE
+                fold_rows(
                     variant,
-                    table,
-                    oldest,
-                    bank.cycle,
-                    (begin + shift) * sample_bytes,
-                    bank.taps + begin * lane_bytes(variant),
-                    bank.tap_stride,
-                    bank.rows,
-                    out + begin * sample_bytes,
-                    stride,
+                    (table, oldest, (begin + shift) * sample_bytes, bank.cycle),
+                    (bank.taps + begin * lane_bytes(variant), bank.tap_stride, bank.rows),
+                    (out + begin * sample_bytes, stride),
                     hops,
-                    -(-(end - begin) // per_vector),
-                    ahead,
+                    vectors,
+                    fetch,
                 )
                 begin = end
 

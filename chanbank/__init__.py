@@ -3,6 +3,15 @@
 from chanbank.analysis.activity import Activity, measure_activity
 from chanbank.analysis.bank import AnalysisBank
 from chanbank.analysis.summary import ChannelRecording, SplitResult
+from chanbank.fixedpoint.bank import FixedPointBank, FixedPointFrames
+from chanbank.fixedpoint.export import export_coefficients
+from chanbank.fixedpoint.noise import NoiseReport, dft_rounding_db, noise_report
+from chanbank.fixedpoint.quantise import (
+    QuantisedPrototype,
+    quantised,
+    rounding_floor_db,
+    word_length,
+)
 from chanbank.metrics.compare import ReportComparison, compare_reports
 from chanbank.metrics.formula import bank_report
 from chanbank.metrics.limits import LimitCheck, Limits
@@ -26,6 +35,10 @@ from chanbank.recordings.recording import Recording
 from chanbank.recordings.segment import Annotation, Segment
 from chanbank.recordings.sigmf_write import write_sigmf
 from chanbank.recordings.sigmf_writer import SigMFWriter
+from chanbank.search.design import Design
+from chanbank.search.find import find_designs
+from chanbank.search.result import DesignSearch
+from chanbank.search.specification import Specification
 from chanbank.splitting import split_recording
 from chanbank.synthesis.bank import SynthesisBank
 from chanbank.synthesis.block import BlockInverse
@@ -44,38 +57,52 @@ __all__ = [
     "ChannelCombiner",
     "ChannelPlan",
     "ChannelRecording",
+    "Design",
+    "DesignSearch",
+    "FixedPointBank",
+    "FixedPointFrames",
     "FrameBounds",
     "LimitCheck",
     "Limits",
+    "NoiseReport",
     "NpyWriter",
     "Prototype",
+    "QuantisedPrototype",
     "Recording",
     "RecordingError",
     "ReportComparison",
     "ReportDisagreement",
     "Segment",
     "SigMFWriter",
+    "Specification",
     "SplitResult",
     "SynthesisBank",
     "bank_report",
     "boxcar_prototype",
     "combine_channels",
     "compare_reports",
+    "dft_rounding_db",
     "dual_prototype",
     "energy_prototype",
     "equiripple_prototype",
+    "export_coefficients",
+    "find_designs",
     "frame_bounds",
     "kaiser_prototype",
     "length_estimates",
     "measure_activity",
     "measured_report",
     "noise_gain",
+    "noise_report",
     "nyquist_prototype",
     "open_recording",
     "prototype_pair",
+    "quantised",
+    "rounding_floor_db",
     "split_recording",
     "tight_prototype",
     "white_error",
     "window_prototype",
+    "word_length",
     "write_sigmf",
 ]

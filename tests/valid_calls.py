@@ -14,8 +14,11 @@ RESULTS = {
     "ChannelRecording",
     "Design",
     "DesignSearch",
+    "FixedPointFrames",
     "FrameBounds",
     "LimitCheck",
+    "NoiseReport",
+    "QuantisedPrototype",
     "Recording",
     "ReportComparison",
     "Segment",
@@ -106,7 +109,20 @@ def combiner():
 
 
 def specification():
-    return chanbank.Specification(400e3, 25e3, occupied_bandwidth=16e3, neighbour_rejection_db=40)
+    return chanbank.Specification(200e3, 25e3, occupied_bandwidth=16e3, neighbour_rejection=40)
+
+
+def coefficients():
+    return chanbank.quantised(chanbank.window_prototype(8, 4, "hann"), 12)
+
+
+def fixed_bank():
+    return chanbank.FixedPointBank(plan(), coefficients())
+
+
+def noise_arguments():
+    made = fixed_bank()
+    return {"bank": made, "samples": 0.1 * X, "result": made(0.1 * X)}
 
 
 X = np.ones(12, "complex64")
@@ -282,4 +298,39 @@ VALID = {
     ),
     "Limits": lambda _: (fold_limits, {}),
     "Limits.check": lambda _: (chanbank.Limits(latency_seconds=9).check, {"report": report()}),
+    "FixedPointBank": lambda _: (
+        chanbank.FixedPointBank,
+        {"plan": plan(), "coefficients": coefficients()},
+    ),
+    "FixedPointBank.__call__": lambda _: (fixed_bank(), {"samples": 0.1 * X}),
+    "FixedPointBank.noise": lambda _: (fixed_bank().noise, {"samples": 0.1 * X}),
+    "FixedPointBank.quantise": lambda _: (fixed_bank().quantise, {"samples": 0.1 * X}),
+    "QuantisedPrototype.compare": lambda _: (coefficients().compare, {"plan": plan()}),
+    "QuantisedPrototype.reports": lambda _: (coefficients().reports, {"plan": plan()}),
+    "Specification": lambda _: (
+        chanbank.Specification,
+        {"sample_rate": 200e3, "spacing": 25e3},
+    ),
+    "dft_rounding_db": lambda _: (chanbank.dft_rounding_db, {"points": 8, "bits": 16}),
+    "export_coefficients": lambda tmp: (
+        chanbank.export_coefficients,
+        {"coefficients": coefficients(), "path": tmp / "taps.csv"},
+    ),
+    "find_designs": lambda _: (
+        chanbank.find_designs,
+        {"specification": specification(), "progress": False},
+    ),
+    "noise_report": lambda _: (chanbank.noise_report, noise_arguments()),
+    "quantised": lambda _: (
+        chanbank.quantised,
+        {"prototype": chanbank.window_prototype(8, 4, "hann"), "bits": 12},
+    ),
+    "rounding_floor_db": lambda _: (
+        chanbank.rounding_floor_db,
+        {"prototype": chanbank.window_prototype(8, 4, "hann"), "bits": 12},
+    ),
+    "word_length": lambda _: (
+        chanbank.word_length,
+        {"prototype": chanbank.window_prototype(8, 4, "hann"), "stopband": 1.5, "stopband_db": 40},
+    ),
 }

@@ -4,6 +4,7 @@ import math
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import (
     Choice,
     Instance,
@@ -55,6 +56,7 @@ OCCUPIED = OwnCheck(
     pair_delay=Optional(Integer(0)),
     dtype=Choice("complex64", "complex128"),
 )
+@one_blas_thread
 def bank_report(
     plan,
     prototype,

@@ -2,6 +2,7 @@
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Integer, Optional, OwnCheck, checked, wrong_type, wrong_value
 from chanbank.metrics._drive import Driver
 from chanbank.metrics._measured_bank import measure_bank
@@ -32,6 +33,7 @@ _FLOOR_EPSILONS = 4
     max_samples=Integer(1),
     seed=Integer(0),
 )
+@one_blas_thread
 def measured_report(
     analysis,
     synthesis=None,

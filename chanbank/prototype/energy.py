@@ -8,6 +8,7 @@ import scipy.linalg
 import scipy.optimize
 import scipy.signal
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Integer, Optional, Real, checked
 from chanbank.prototype._measure import band_extremes, decibels, stopband_peak
 from chanbank.prototype.lengths import require_band_edges
@@ -30,6 +31,7 @@ _MARGIN = 40
     passband_weight=Optional(Real(above=0)),
     passband_db=Optional(Real(above=0, unit="dB")),
 )
+@one_blas_thread
 def energy_prototype(
     channels, taps_per_branch, *, stopband, passband=None, passband_weight=None, passband_db=None
 ):

@@ -2,6 +2,7 @@
 
 import math
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Integer, Optional, OwnCheck, Real, checked
 from chanbank.prototype._bands import BandSet, parsed_bands
 from chanbank.prototype._ripple_start import Lowpass
@@ -28,6 +29,7 @@ _STOPBAND += "(low, high, weight) in channel spacings"
     weight=Optional(Real(above=0)),
     slope_db=Real(0, 40, unit="dB per octave"),
 )
+@one_blas_thread
 def equiripple_prototype(
     channels,
     taps_per_branch=None,

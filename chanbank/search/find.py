@@ -1,5 +1,6 @@
 """The search: every candidate designed, reported and held against the specification."""
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Boolean, Instance, Optional, OwnCheck, checked, wrong_type, wrong_value
 from chanbank.metrics.cost import bank_cost, state_bytes
 from chanbank.metrics.formula import bank_report
@@ -26,6 +27,7 @@ _METHODS = "None or a non-empty sequence of " + ", ".join(repr(name) for name in
     methods=OwnCheck(_METHODS, ("kaiser", TypeError), (["no such"], ValueError), ([], ValueError)),
     progress=Optional(Boolean()),
 )
+@one_blas_thread
 def find_designs(specification, *, methods=None, progress=None):
     """The designs that meet a specification, none of them beaten in every respect.
 

@@ -165,7 +165,7 @@ class _Layout:
         frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
-        self.ring_rows = self.reach + self.block
+        self.ring_rows = self.reach + self.block + self.slot
         self.plan = make_plan(
             channels,
             self.slot,

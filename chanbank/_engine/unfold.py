@@ -113,11 +113,20 @@ def _weigh(variant, row, weights, count):
 
 @njit(nogil=True, error_model="numpy")
 def _transform(variant, bank, table, first, count):
-    """Inverse DFTs of `count` given frames, the first of them frame `first`, into the ring."""
+    """Inverse DFTs of `count` given frames, the first of them frame `first`, into the ring.
+
+    Straight into it where rows stay as they are and a slot does not wrap; the ring has room for
+    what the plan writes beyond the last frame.
+    """
     rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
     floats = bank.channels * bank.held
     for slot in range(0, count, bank.slot):
-        execute_plan(bank.execute, bank.plan, bank.given + slot * bank.given_stride, bank.made)
+        place = (first + slot) % bank.ring_rows
+        straight = bank.rotate != 0 and place + bank.slot <= bank.ring_rows
+        target = rows[place] if straight else bank.made
+        execute_plan(bank.execute, bank.plan, bank.given + slot * bank.given_stride, target)
+        if straight:
+            continue
         for index in range(min(bank.slot, count - slot)):
             frame = first + slot + index
             row = rows[frame % bank.ring_rows]

@@ -194,16 +194,16 @@ def small_pushes(settings):
             case = routes.Case(channels, hop, 8, 1 << 16)
             pushes = len(case.input) // 4096
             pieces = [case.input[i * 4096 : (i + 1) * 4096] for i in range(pushes)]
-            case.bank.reset()
-            counts = []
-            for piece in pieces:
-                counts.append(case.bank.frame_count(len(piece)))
-                case.bank.push(piece)
-            outs = [case.output[:count] for count in range(max(counts) + 2)]
+            outs = [case.output[:count] for count in range(4096 // hop + 3)]
+            position = [case.bank.next_sample]
 
-            def stream(bank=case.bank, pieces=pieces, outs=outs):
+            def stream(push=case.bank.push, pieces=pieces, outs=outs, hop=hop, position=position):
+                here = position[0]
                 for piece in pieces:
-                    bank.push(piece, out=outs[bank.frame_count(4096)])
+                    there = here + 4096
+                    push(piece, out=outs[-(-there // hop) - -(-here // hop)])
+                    here = there
+                position[0] = here
 
             frames = -(-4096 // hop)
             given = routes.aligned((frames, channels), case.dtype)

@@ -1,0 +1,1 @@
+"""Pictures: free functions of a prototype, a report, an activity, a search."""

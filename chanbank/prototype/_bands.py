@@ -64,6 +64,8 @@ class BandSet:
             result[(f >= low - slack) & (f <= high + slack)] = 1 / weight
         return result
 
+    counted = levels
+
     def bands(self, rate, ratio):
         """Exchange bands at `rate` channels, the gaps included at their relief.
 

@@ -82,7 +82,9 @@ def exchange(length, channels, bands, start=None, *, rough=False):
                 return Exchange(None, float(peak.mean()), f[chosen], error[chosen] * level[chosen])
             found = _polished(length, channels, bands, f[chosen], band[chosen])
             if found is None:
-                return None
+                # Rounding moved the peaks past each other: the grid's own solution stands.
+                swing = error[chosen] * level[chosen]
+                found = Exchange(_taps(fit, length), float(peak.mean()), f[chosen], swing)
             # The proof: nowhere on the grid does the weighted error exceed that of the reference.
             error = weight * (target - _amplitude(found.taps, x) / shape)
             limit = found.delta * 1.01 + 1e-14 * weight

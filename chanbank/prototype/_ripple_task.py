@@ -8,88 +8,34 @@ import scipy.optimize
 
 from chanbank.prototype._bands import BandSet, stretched
 from chanbank.prototype._measure import band_extremes, decibels, stopband_ripples
+from chanbank.prototype._ripple_figures import ByPassband, ByStopband, ByWeight
 from chanbank.prototype._ripple_start import short_solution, solve_at
 from chanbank.prototype.lengths import deviation, length_estimates, ripple_db
 from chanbank.prototype.prototype import Prototype
 
-__all__ = ["DEEPEST_DB", "Figures", "RippleTask"]
+__all__ = ["DEEPEST_DB", "RippleTask"]
 
 # Up to this many taps the exchange algorithm designs the filter itself.
 _DIRECT = 400
 _DIRECT_BANDS = 800
 
 # Ripples below these are left to rounding: a design is not pushed past them.
-DEEPEST_DB = 160.0
-_FLATTEST = 1e-8
+DEEPEST_DB = 150.0
+_FLATTEST = 1e-7
 
+# Up to this many taps, closed-form designs are aimed by their measured passband, unless its
+# deviation is so small that rounding shows.
+_MEASURED = 1 << 17
+_NOISY = 1e-6
 
-class Figures:
-    """What is asked of the two bands."""
+# A filter with larger ripples than this separates nothing.
+_LOUDEST = 0.7
 
-    def __init__(self, channels, passband, passband_db, stopband_db, weight):
-        self.channels, self.passband = channels, passband
-        self.passband_db, self.stopband_db, self.weight = passband_db, stopband_db, weight
-        if weight is not None and (passband_db is not None or stopband_db is not None):
-            raise ValueError(
-                f"weight is for designs with neither figure fixed; got weight {weight:g} with "
-                f"passband_db {passband_db} and stopband_db {stopband_db}"
-            )
+# For a ripple that is fixed: the other one, and its limit.
+_OTHER = {"stopband": ("passband", _FLATTEST), "passband": ("stopband", 10 ** (-DEEPEST_DB / 20))}
 
-    def require_both(self):
-        if self.passband_db is None or self.stopband_db is None:
-            raise ValueError(
-                "taps_per_branch must be an integer of 1 or more unless both passband_db and "
-                f"stopband_db are given; got taps_per_branch None, passband_db {self.passband_db} "
-                f"and stopband_db {self.stopband_db}"
-            )
-
-
-class _ByWeight:
-    """deviation = weight * delta."""
-
-    def __init__(self, weight):
-        self.weight = weight
-
-    def free(self, level):
-        return level
-
-    def __call__(self, u):
-        return u, u + math.log(self.weight)
-
-    def slopes(self, u):
-        return 1.0, 1.0
-
-
-class _ByStopband:
-    """delta fixed, the passband deviation free."""
-
-    def __init__(self, delta, weight):
-        self.delta, self.weight = delta, weight
-
-    def free(self, level):
-        return level + math.log(self.weight)
-
-    def __call__(self, u):
-        return math.log(self.delta), u
-
-    def slopes(self, u):
-        return 0.0, 1.0
-
-
-class _ByPassband:
-    """The passband deviation fixed, delta free."""
-
-    def __init__(self, deviation):
-        self.deviation = deviation
-
-    def free(self, level):
-        return level
-
-    def __call__(self, u):
-        return u, math.log(self.deviation)
-
-    def slopes(self, u):
-        return 1.0, 0.0
+# Rounds of aiming at a figure that the other band's ripple moves.
+_AIMS = 24
 
 
 class RippleTask:
@@ -100,7 +46,7 @@ class RippleTask:
         self.stopband, self.slope_db = stopband, slope_db
         self.pieces = isinstance(lowpass, BandSet)
         self.channels = figures.channels
-        self._memory, self._near = {}, {}
+        self._memory, self._near, self._ratios = {}, {}, {}
 
     def prototype(self, length):
         found = self.taps(length)
@@ -121,15 +67,7 @@ class RippleTask:
     def finish(self, taps):
         taps = taps / taps.sum()
         lowpass = self.lowpass
-        shaped = lowpass.slope or self.pieces
-        ripples = stopband_ripples(
-            taps,
-            self.channels,
-            lowpass.stopband,
-            levels=(lambda f: lowpass.levels(f, self.channels)) if shaped else None,
-            also=lowpass.edges if self.pieces else None,
-        )
-        low, high = band_extremes(taps, self.channels, 0.0, lowpass.passband)
+        ripples, low, high = self._measured(taps)
         # Half the sample rate is no ripple but a null for even lengths, and the edge may be none.
         lobes = ripples[ripples > 0.5 * ripples.max()]
         stopband_db = -float(decibels(ripples.max()))
@@ -148,35 +86,44 @@ class RippleTask:
             },
         )
 
+    def _measured(self, taps):
+        """Stopband peaks over their levels, lowest and highest in the passband; over H(0)."""
+        lowpass = self.lowpass
+        shaped = lowpass.slope or self.pieces
+        ripples = stopband_ripples(
+            taps,
+            self.channels,
+            lowpass.stopband,
+            levels=(lambda f: lowpass.counted(f, self.channels)) if shaped else None,
+            also=lowpass.edges if self.pieces else None,
+        )
+        return ripples, *band_extremes(taps, self.channels, 0.0, lowpass.passband)
+
     def taps(self, length):
         """Taps for the figures at this length, not normalised."""
         wanted = self.figures
-        if wanted.stopband_db is None and wanted.passband_db is None:
-            return self._solved(length, "weight", wanted.weight or 1.0)[0]
         if wanted.stopband_db is not None:
-            return self._by_stopband(length, 10 ** (-wanted.stopband_db / 20))
-        return self._by_passband(length, deviation(wanted.passband_db))
+            return self._aimed(length, "stopband", 10 ** (-wanted.stopband_db / 20))
+        if wanted.passband_db is not None:
+            return self._aimed(length, "passband", deviation(wanted.passband_db))
+        return self._solved(length, "weight", wanted.weight or 1.0, wanted.weight or 1.0)[0]()
 
-    def _by_stopband(self, length, figure):
-        # The figure is relative to H(0), which may be a crest or a trough of the passband.
-        delta = figure
-        for _ in range(4):
-            ratio = self._ratio(length, lambda level, dev, d=delta: level - math.log(d))
-            if ratio is None or delta * ratio < _FLATTEST:
-                return self._solved(length, "passband", _FLATTEST)[0]
-            taps, centre = self._solved(length, "stopband", delta, ratio)
-            if abs(figure * centre / delta - 1) < 1e-9:
+    def _aimed(self, length, kind, figure):
+        """Taps whose measured ripple in one band is `figure`, and the other's the least."""
+        other, limit = _OTHER[kind]
+        value = figure
+        for _ in range(_AIMS):
+            ratio = self._ratio(length, kind, value)
+            if ratio is None:
+                return self._solved(length, other, limit, self._ratio(length, other, limit))[0]()
+            # The stopband's figure is over H(0), which may be a crest or a trough of the passband.
+            build, reached = self._solved(length, kind, value, ratio)
+            if abs(reached / figure - 1) < 1e-6:
                 break
-            delta = figure * centre
-        return taps
-
-    def _by_passband(self, length, dev):
-        ratio = self._ratio(length, lambda level, reached: reached - math.log(dev))
-        deepest = 10 ** (-DEEPEST_DB / 20)
-        if ratio is None or dev / ratio < deepest:
-            ratio = self._ratio(length, lambda level, reached: level - math.log(deepest))
-            return self._solved(length, "stopband", deepest, ratio)[0]
-        return self._solved(length, "passband", dev, ratio)[0]
+            value = min(value * figure / reached, 0.9)
+        if abs(reached / figure - 1) > 1e-3:
+            raise ValueError(self._unsolved(length))
+        return build()
 
     def _short(self, length):
         """Length and sample rate (channel spacings) of the filter that the exchange solves."""
@@ -196,71 +143,113 @@ class RippleTask:
         key = length, ratio, rough
         if key not in self._memory:
             short, rate = self._short(length)
-            found = short_solution(self.lowpass, short, rate, ratio, self._near.get(length), rough=rough)
+            near = self._near.get(length)
+            found = short_solution(self.lowpass, short, rate, ratio, near, rough=rough)
             self._memory[key] = found
             if found is not None:
                 self._near[length] = found
         return self._memory[key]
 
-    def _ratio(self, length, miss):
-        """The ratio of ripples at which `miss(log delta, log deviation)` is zero, or None.
+    def _ratio(self, length, kind, value):
+        """The ratio of ripples at which delta or the deviation has this value.
 
-        None where a ripple on the way falls below what the exchange resolves.
+        None where the other ripple would fall below the limit of what double precision can use.
         """
-        even = self._exchange(length, 1.0, rough=True)
-        if even is None:
-            raise ValueError(self._unsolved(length))
+        closed = self._short(length)[0] != length
+        if closed and (length, kind) in self._ratios:
+            # A start for the closed form, good enough for values nearby.
+            return self._ratios[length, kind]
+        goal = math.log(value)
+        _, limit = _OTHER[kind]
 
         def at(x, rough=True):
             found = self._exchange(length, math.exp(x), rough=rough)
-            if found is None or min(found.delta, found.delta * math.exp(x)) < 1e-11:
-                raise _TooDeep
-            here = math.log(found.delta)
-            return miss(here, here + x)
+            if found is None or max(found.delta, found.delta * math.exp(x)) > _LOUDEST:
+                raise _NoSolution
+            ripples = found.delta, found.delta * math.exp(x)
+            mine, other = ripples if kind == "stopband" else ripples[::-1]
+            if other < limit / 3:
+                raise _BeyondLimit
+            return math.log(mine) - goal, other
 
-        level = math.log(even.delta)
-        first = miss(level, level)
-        # Raising the ratio lowers delta and raises the deviation, each by some part of it.
-        rises = miss(0.0, 1.0) > miss(0.0, 0.0)
-        step = -max(abs(first), 0.1) if (first > 0) == rises else max(abs(first), 0.1)
-        low, high = 0.0, step
         try:
-            while at(low) * at(high) > 0:
-                low, high = high, high + step
-            root = scipy.optimize.brentq(at, low, high, xtol=1e-3)
-            if self._short(length)[0] == length:
-                root = _secant(lambda x: at(x, rough=False), root)
-        except _TooDeep:
+            near = math.log(self._ratios.get((length, kind), 1.0))
+            low, high = self._bracket(at, near, 1.0 if kind == "stopband" else -1.0)
+            root = scipy.optimize.brentq(lambda x: at(x)[0], low, high, xtol=1e-3)
+            if not closed:
+                root = _secant(lambda x: at(x, rough=False)[0], root)
+            if at(root)[1] < limit:
+                raise _BeyondLimit
+        except _BeyondLimit:
             return None
+        except _NoSolution:
+            raise ValueError(self._unsolved(length)) from None
+        self._ratios[length, kind] = math.exp(root)
         return math.exp(root)
 
-    def _solved(self, length, kind, value, ratio=None):
-        """(taps, A(0)) with one quantity fixed: the weight, delta, or the passband deviation.
+    @staticmethod
+    def _bracket(at, near, sign):
+        """Two points between which `at` changes sign, from `near` on."""
+        first = at(near)[0]
+        # Raising the ratio lowers delta and raises the deviation, each by some part of it.
+        step = sign * math.copysign(max(abs(first), 0.1), first)
+        low, high = near, near + step
+        while True:
+            try:
+                if at(high)[0] * first <= 0:
+                    return low, high
+                low, high = high, high + step
+            except (_NoSolution, _BeyondLimit):
+                step /= 2
+                high = low + step
+                if abs(step) < 0.05:
+                    raise
 
-        The taps are in the scale where the middle of the passband is 1.
+    def _solved(self, length, kind, value, ratio):
+        """(function that makes the taps, reached) with one quantity fixed.
+
+        The quantity is the weight, delta, or the passband deviation; what was reached is delta
+        over H(0) or the deviation.
         """
-        if kind == "weight":
-            ratio = value
-        elif ratio is None:
-            ratio = self._ratio(length, lambda level, reached: reached - math.log(value))
         start = None if ratio is None else self._exchange(length, ratio)
         if start is None:
             raise ValueError(self._unsolved(length))
         short, rate = self._short(length)
-        if short == length:
-            return start.taps, abs(start.taps.sum())
-        if self.pieces:
-            taps = stretched(start.taps, length)
-            return taps, abs(taps.sum())
+        if short == length or self.pieces:
+            taps = start.taps if short == length else stretched(start.taps, length)
+            if kind == "weight":
+                return (lambda: taps), ratio
+            ripples, low, high = self._measured(taps)
+            reached = ripples.max() if kind == "stopband" else (high - low) / (high + low)
+            return (lambda: taps), float(reached)
         model = self._model(length, start, rate, kind, value, ratio)
-        ahead, behind = model.parts(np.zeros(1))
-        return model.taps(), float(0.5 * (ahead + behind)[0])
+        if kind == "stopband":
+            ahead, behind = model.parts(np.zeros(1))
+            over = math.exp(model.level) / float(0.5 * (ahead + behind)[0])
+            return (lambda: self._checked(model, None)), over
+        if kind == "passband" and length <= _MEASURED and value > _NOISY:
+            taps = self._checked(model, value)
+            low, high = band_extremes(taps, self.channels, 0.0, self.lowpass.passband)
+            return (lambda: taps), (high - low) / (high + low)
+        return (lambda: self._checked(model, None)), value
+
+    def _checked(self, model, deviation):
+        """The taps of a model whose own response has the model's ripples."""
+        taps = model.taps()
+        ripples, low, high = self._measured(taps)
+        # The coefficients that the closed form drops tell where there are hardly any ripples.
+        level = math.exp(model.level) / abs(taps.sum())
+        if ripples.max() > level * 1.005 + 1e-13:
+            raise ValueError(self._unsolved(len(taps)))
+        if deviation is not None and (high - low) / (high + low) > 1.05 * deviation:
+            raise ValueError(self._unsolved(len(taps)))
+        return taps
 
     def _model(self, length, start, rate, kind, value, ratio):
         pair = {
-            "weight": lambda: _ByWeight(value),
-            "stopband": lambda: _ByStopband(value, ratio),
-            "passband": lambda: _ByPassband(value),
+            "weight": lambda: ByWeight(value),
+            "stopband": lambda: ByStopband(value, ratio),
+            "passband": lambda: ByPassband(value),
         }[kind]()
         model = solve_at(self.lowpass, start, rate, length, self.channels, pair)
         if model is None:
@@ -273,7 +262,7 @@ class RippleTask:
             self.channels,
             passband=lowpass.passband,
             stopband=lowpass.stopband,
-            passband_db=ripple_db(1e-8),
+            passband_db=ripple_db(_FLATTEST),
             stopband_db=DEEPEST_DB,
         )["kaiser equiripple"]
         if length > 0.9 * reach:
@@ -332,8 +321,12 @@ class RippleTask:
         raise ValueError(self._unsolved(high))
 
 
-class _TooDeep(Exception):
+class _BeyondLimit(Exception):
     """A ripple below what double precision can use."""
+
+
+class _NoSolution(Exception):
+    """No minimax filter found, or one that separates nothing."""
 
 
 def _secant(function, x):

@@ -5,8 +5,9 @@ import math
 from chanbank._blas import one_blas_thread
 from chanbank._checks import Integer, Optional, OwnCheck, Real, checked
 from chanbank.prototype._bands import BandSet, parsed_bands
+from chanbank.prototype._ripple_figures import Figures
 from chanbank.prototype._ripple_start import Lowpass
-from chanbank.prototype._ripple_task import DEEPEST_DB, Figures, RippleTask
+from chanbank.prototype._ripple_task import DEEPEST_DB, RippleTask
 from chanbank.prototype.lengths import require_band_edges
 
 __all__ = ["equiripple_prototype"]
@@ -73,7 +74,7 @@ def equiripple_prototype(
         of 10 asks for ripples 20 dB lower than at weight 1.
     passband_db, stopband_db : float, optional
         Passband ripple (highest over lowest) and attenuation at the stopband edge relative to
-        H(0), in dB, the latter at most 160. With `taps_per_branch`, one of them fixes that ripple
+        H(0), in dB, the latter at most 150. With `taps_per_branch`, one of them fixes that ripple
         and the other band gets what is left; both make it an error not to meet them.
     weight : float, optional
         Ratio of passband deviation to stopband ripple, where neither is fixed. Default 1.
@@ -100,7 +101,7 @@ def equiripple_prototype(
     Notes
     -----
     Where a fixed figure leaves the other band more than double precision can use, the design
-    stops at 160 dB and a deviation of 1e-8 and meets the fixed figure with something to spare.
+    stops at 150 dB and a deviation of 1e-7 and meets the fixed figure with something to spare.
 
     References
     ----------

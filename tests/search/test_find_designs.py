@@ -90,7 +90,7 @@ def test_random_specifications(seed):
 
 def test_same_specification_same_result():
     spec = Specification(400e3, 25e3, occupied_bandwidth=15e3, neighbour_rejection=55)
-    first, second = find_designs(spec), find_designs(spec)
+    first, second = (find_designs(spec, methods=["equiripple", "energy"]) for _ in range(2))
     assert first.table() == second.table()
     for one, other in zip(first.designs, second.designs, strict=True):
         assert np.array_equal(one.prototype.taps, other.prototype.taps)

@@ -125,6 +125,10 @@ class ReportComparison:
     ----------
     reports : tuple of BankReport
     labels : tuple of str
+
+    Examples
+    --------
+    See `compare_reports`.
     """
 
     def __init__(self, reports, labels):
@@ -175,6 +179,13 @@ class ReportComparison:
         Returns
         -------
         str
+
+        Examples
+        --------
+        >>> from chanbank import ChannelPlan, bank_report, boxcar_prototype, compare_reports
+        >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
+        >>> print(compare_reports([report]).table().splitlines()[6])
+        passband ripple                  dB             2.42
         """
         rows = [("figure (worst channel)", "", list(self.labels)), *self._rows()]
         title = max(len(row[0]) for row in rows)
@@ -216,6 +227,13 @@ class ReportComparison:
         Returns
         -------
         dict
+
+        Examples
+        --------
+        >>> from chanbank import ChannelPlan, bank_report, boxcar_prototype, compare_reports
+        >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
+        >>> compare_reports([report]).to_dict()["labels"]
+        ['boxcar']
         """
         return {
             "labels": list(self.labels),

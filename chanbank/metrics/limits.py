@@ -195,6 +195,10 @@ class LimitCheck:
     ----------
     lines : tuple of LimitLine
     passed : bool
+
+    Examples
+    --------
+    See `Limits`.
     """
 
     lines: tuple
@@ -223,7 +227,20 @@ class LimitCheck:
         return f"<table>{rows}</table>"
 
     def to_dict(self):
-        """The check as a dict that JSON can hold."""
+        """The check as a dict that JSON can hold.
+
+        Returns
+        -------
+        dict
+            ``passed`` and ``lines``, each with figure, unit, limit, value and margin.
+
+        Examples
+        --------
+        >>> from chanbank import ChannelPlan, Limits, bank_report, boxcar_prototype
+        >>> report = bank_report(ChannelPlan(64e3, 64, 64), boxcar_prototype(64))
+        >>> Limits(scalloping_loss=4).check(report).to_dict()["passed"]
+        True
+        """
         return {
             "passed": self.passed,
             "lines": [

@@ -11,7 +11,9 @@ import sys
 import warnings
 from fractions import Fraction
 
-from chanbank import _shell
+from chanbank._describe import describe
+from chanbank._rebuild import rebuild
+from chanbank._shell import propose, report, split
 from chanbank.metrics.figures import DEFINITIONS
 
 __all__ = ["main"]
@@ -83,7 +85,7 @@ def _build_parser():
 
     sub = command(
         "describe",
-        _shell.describe,
+        describe,
         "what a recording holds: format, rate, levels, segments, and whether a raster fits",
         [
             "grauwiek.sigmf-meta",
@@ -95,7 +97,7 @@ def _build_parser():
 
     sub = command(
         "propose",
-        _shell.propose,
+        propose,
         "find the designs that meet a receiver's specification at the least cost",
         [
             "--sample-rate 4.8M --spacing 25k --neighbour-rejection 70 --alias-level -70",
@@ -130,12 +132,13 @@ def _build_parser():
     )
     group = sub.add_argument_group("result")
     group.add_argument("--save", metavar="FILE", help="store the first design's prototype (.npz)")
+    group.add_argument("--picture", metavar="FILE", help="draw the trade-off (.pdf or .png)")
     group.add_argument("--overwrite", action="store_true", help="replace a file that exists")
     group.add_argument("--quiet", action="store_true", help="no progress bar")
 
     sub = command(
         "split",
-        _shell.split,
+        split,
         "write one SigMF recording for each channel of a recording",
         [
             "grauwiek.sigmf-meta channels --spacing 25k",
@@ -165,12 +168,13 @@ def _build_parser():
         choices=("cf32_le", "ci16_le"),
         default="cf32_le",
     )
-    group.add_argument("--overwrite", action="store_true", help="replace channels that exist")
+    group.add_argument("--picture", metavar="FILE", help="draw the activity (.pdf or .png)")
+    group.add_argument("--overwrite", action="store_true", help="replace what exists")
     group.add_argument("--quiet", action="store_true", help="no progress bar")
 
     sub = command(
         "report",
-        _shell.report,
+        report,
         "what a bank leaks, aliases, costs and fails to reconstruct, and whether limits are met",
         [
             "--sample-rate 4.8M --spacing 25k --bare",
@@ -194,11 +198,12 @@ def _build_parser():
         "--measured", action="store_true", help="run tones and noise, and hold them against theory"
     )
     group.add_argument("--save", metavar="FILE", help="store the analysis prototype (.npz)")
+    group.add_argument("--sheet", metavar="FILE", help="draw the summary sheet (.pdf or .png)")
     group.add_argument("--overwrite", action="store_true", help="replace a file that exists")
 
     sub = command(
         "rebuild",
-        _shell.rebuild,
+        rebuild,
         "check a reconstruction: take a recording apart, put it together, measure the difference",
         [
             "grauwiek.sigmf-meta --spacing 25k",

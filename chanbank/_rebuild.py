@@ -1,19 +1,79 @@
-"""A recording through analysis and synthesis and back, streamed; and what that changed."""
+"""The command rebuild: a recording through both banks and back, and what that changed."""
 
+import contextlib
 import math
 import os
+import tempfile
 
 import numpy as np
 
+from chanbank._shell import (
+    given_bank,
+    given_pair,
+    given_plan,
+    given_recording,
+    keeping_apart,
+    megahertz,
+    plan_data,
+    plan_text,
+)
 from chanbank.analysis.bank import AnalysisBank
-from chanbank.recordings import SigMFWriter
+from chanbank.recordings import SigMFWriter, open_recording
+from chanbank.synthesis.bank import SynthesisBank
 
-__all__ = ["difference", "write_rebuilt"]
+__all__ = ["rebuild"]
 
 _BLOCK = 1 << 18
+_DEFAULT_PAIR = (8, 8)  # taps per branch of analysis and synthesis
+_MEASURING_DB = 120.0  # between what was muted, often strong, and what was not
 
 
-def write_rebuilt(recording, analysis, back, path, overwrite):
+def rebuild(options):
+    """Take a recording apart, put it back together, and say what is left between the two."""
+    with contextlib.ExitStack() as stack:
+        recording = stack.enter_context(given_recording(options))
+        plan = given_plan(options, recording)
+        if options.pair is None and options.synthesis is None:
+            options.pair = _DEFAULT_PAIR
+        prototype, synthesis = given_pair(options, plan)
+        muted = sorted({plan.index_of(place) for place in options.mute})
+        gains = np.ones(plan.output_channels)
+        gains[muted] = 0
+        analysis = given_bank(options, plan, prototype)
+        back = SynthesisBank(plan, synthesis, gains=gains, dtype=options.dtype)
+        path = options.output
+        if path is None:
+            path = os.path.join(stack.enter_context(tempfile.TemporaryDirectory()), "rebuilt")
+        _write_rebuilt(recording, analysis, back, path, options.overwrite)
+        rebuilt = stack.enter_context(open_recording(path))
+        sharp = keeping_apart(options, plan, _MEASURING_DB) if muted else None
+        error, left = _difference(recording, rebuilt, plan, sharp, back.delay, muted)
+    met = error is None or error <= options.error_db
+    data = {
+        "recording": recording.path,
+        "rebuilt": options.output,
+        "plan": plan_data(plan),
+        "delay_samples": back.delay,
+        "error_db": error,
+        "limit_db": options.error_db,
+        "passed": met,
+        "muted": [
+            {"channel": k, "frequency_hz": float(plan.frequencies[k]), "left_db": level}
+            for k, level in zip(muted, left, strict=True)
+        ],
+    }
+    lines = [f"{plan_text(plan)}; both banks delay by {back.delay} samples"]
+    for place in data["muted"]:
+        level = "nothing" if place["left_db"] is None else f"{place['left_db']:.1f} dB"
+        lines.append(f"muted {megahertz(place['frequency_hz'])}: {level} is left there")
+    what = "all but the muted channels and their neighbours" if muted else "the whole recording"
+    shown = "exactly 0" if error is None else f"{error:.1f} dB"
+    verdict = "pass" if met else "FAIL"
+    lines.append(f"{verdict}  error of {what}: {shown}, at most {options.error_db:g} dB")
+    return "\n".join(lines), data, met
+
+
+def _write_rebuilt(recording, analysis, back, path, overwrite):
     """The recording through both banks, segment by segment, aligned with the original."""
     kind = ("c" if recording.complex else "r") + ("f64" if back.dtype.itemsize > 8 else "f32")
     with SigMFWriter(
@@ -47,7 +107,7 @@ def _rebuilt_blocks(recording, part, analysis, back):
     yield back.finish()
 
 
-def difference(recording, rebuilt, plan, prototype, delay, muted):
+def _difference(recording, rebuilt, plan, prototype, delay, muted):
     """Error power over signal power in dB, and what is left in each muted channel.
 
     With muted channels the error is that of all channels but these and their neighbours;

@@ -1,14 +1,12 @@
-"""The jobs behind the shell's commands: options in, (text, data for JSON, all limits met) out."""
+"""What the shell's options stand for, and the commands propose, split and report.
 
-import contextlib
-import math
+A command takes the options and returns (text, data for JSON, whether all limits are met).
+"""
+
 import os
 import sys
-import tempfile
 
-import numpy as np
-
-from chanbank._rebuild import difference, write_rebuilt
+from chanbank._files import refuse_existing, whole_file
 from chanbank.analysis.bank import AnalysisBank
 from chanbank.metrics.formula import bank_report
 from chanbank.metrics.limits import Limits
@@ -16,6 +14,9 @@ from chanbank.metrics.measured import measured_report
 from chanbank.metrics.present import engineering
 from chanbank.metrics.verify import ReportDisagreement
 from chanbank.plan import ChannelPlan
+from chanbank.plots.activity import plot_activity
+from chanbank.plots.sheet import summary_sheet
+from chanbank.plots.tradeoff import plot_tradeoff
 from chanbank.prototype.boxcar import boxcar_prototype
 from chanbank.prototype.equiripple import equiripple_prototype
 from chanbank.prototype.prototype import Prototype
@@ -26,121 +27,30 @@ from chanbank.splitting import split_recording
 from chanbank.synthesis.bank import SynthesisBank
 from chanbank.synthesis.pair import prototype_pair
 
-__all__ = ["describe", "propose", "rebuild", "report", "split"]
-
-# Levels are measured in this many pieces, spread evenly over a recording.
-_PIECES, _PIECE = 16, 1 << 18
+__all__ = [
+    "given_bank",
+    "given_pair",
+    "given_plan",
+    "given_recording",
+    "keeping_apart",
+    "megahertz",
+    "plan_data",
+    "plan_text",
+    "propose",
+    "report",
+    "split",
+]
 
 _RIPPLE_DB = 0.1  # over the occupied band, of the prototypes that are designed here
-_MEASURING_DB = 120.0  # between what was muted, often strong, and what was not
-_DEFAULT_PAIR = (8, 8)  # taps per branch of analysis and synthesis
 
 
-def describe(options):
-    """What a recording holds, and whether a raster fits it."""
-    with _open(options) as recording:
-        plan = None if options.spacing is None else _plan(options, recording)
-        data = {
-            "path": recording.path,
-            "container": recording.container,
-            "datatype": recording.datatype,
-            "streams": recording.streams,
-            "samples": recording.samples,
-            "sample_rate_hz": recording.sample_rate,
-            "center_frequency_hz": recording.center_frequency,
-            "duration_s": recording.duration,
-            "truncated": recording.truncated,
-            "levels": _levels(recording),
-            "segments": [
-                {
-                    "start": part.start,
-                    "length": part.length,
-                    "center_frequency_hz": part.center_frequency,
-                    "datetime": part.datetime,
-                }
-                for part in recording.segments
-            ],
-            "annotations": [
-                {"start": note.start, "length": note.length, "label": note.label}
-                for note in recording.annotations
-            ],
-            "plan": None if plan is None else _plan_data(plan),
-        }
-        return "\n".join(_description(data, recording.complex, plan)), data, True
-
-
-def _description(data, is_complex, plan):
-    streams = f", {data['streams']} streams" if data["streams"] > 1 else ""
-    yield f"{data['path']}: {data['container']}, {data['datatype']}{streams}"
-    rate, center = data["sample_rate_hz"], data["center_frequency_hz"]
-    if rate is None:
-        yield f"  {data['samples']:,} samples; the rate is not known (--sample-rate gives it)"
-    else:
-        duration = engineering(data["duration_s"], "s")
-        yield f"  {data['samples']:,} samples at {engineering(rate, 'S/s')}: {duration}"
-        if center is not None:
-            low = center - rate / 2 if is_complex else center
-            yield f"  band {_place(low)} to {_place(center + rate / 2)}; centre {_place(center)}"
-    levels = data["levels"]
-    if levels["measured_samples"]:
-        yield (
-            f"  level {_dbfs(levels['rms_dbfs'])} rms, {_dbfs(levels['peak_dbfs'])} peak, "
-            f"{levels['full_scale_share']:.2g} of the samples at full scale"
-            + (f", {levels['not_finite']} not finite" if levels["not_finite"] else "")
-            + f" ({levels['measured_samples']:,} samples looked at)"
-        )
-    for number, part in enumerate(data["segments"] if len(data["segments"]) > 1 else ()):
-        place = part["center_frequency_hz"]
-        where = "" if place is None else f"; centre {_place(place)}"
-        yield f"  segment {number}: {part['length']:,} samples from {part['start']:,}{where}"
-    for note in data["annotations"]:
-        label = note["label"] or "(no label)"
-        yield f"  annotation {label}: {note['length']:,} samples from {note['start']:,}"
-    if plan is not None:
-        yield f"  raster of {engineering(plan.spacing, 'Hz')}: {_plan_text(plan)}"
-
-
-def _levels(recording):
-    """Level figures of evenly spread pieces, each stream alike; full scale is 0 dB."""
-    step = max(_PIECE, recording.samples // _PIECES)
-    full = 1.0
-    if recording.datatype[1] in "iu":
-        full -= 2.0 ** (1 - int(recording.datatype[2:].split("_")[0]))
-    energy = peak = 0.0
-    count = at_full = not_finite = 0
-    for start in range(0, recording.samples, step):
-        piece = recording.read(start, min(_PIECE, recording.samples - start), as_float="double")
-        finite = np.isfinite(piece)
-        not_finite += int(finite.size - finite.sum())
-        piece = np.where(finite, piece, 0)
-        part = np.maximum(np.abs(piece.real), np.abs(piece.imag))
-        energy += float(np.sum(np.abs(piece) ** 2))
-        peak = max(peak, float(part.max(initial=0.0)))
-        at_full += int(np.sum(part >= full))
-        count += piece.size
-    return {
-        "measured_samples": count,
-        "rms_dbfs": _decibels(energy / count) if count else None,
-        "peak_dbfs": _decibels(peak**2) if count else None,
-        "full_scale_share": at_full / count if count else None,
-        "not_finite": not_finite,
-    }
-
-
-def _decibels(power):
-    """In dB, or None for a power that is exactly zero."""
-    return 10 * math.log10(power) if power > 0 else None
-
-
-def _dbfs(level):
-    return "exactly 0" if level is None else f"{level:.1f} dBFS"
-
-
-def _place(hertz):
+def megahertz(hertz):
+    """A place in the band, for people."""
     return f"{hertz / 1e6:.9g} MHz"
 
 
-def _open(options):
+def given_recording(options):
+    """The recording that the command names."""
     return open_recording(
         options.file,
         datatype=options.datatype,
@@ -152,7 +62,7 @@ def _open(options):
     )
 
 
-def _plan(options, recording=None):
+def given_plan(options, recording=None):
     """The channel plan that the raster options ask for, on a recording's rate or a given one."""
     rate, center, real = options.sample_rate, options.center_frequency, False
     if recording is not None:
@@ -185,14 +95,16 @@ def _plan(options, recording=None):
     )
 
 
-def _plan_text(plan):
+def plan_text(plan):
+    """A plan in one line."""
     return (
         f"{plan.output_channels} channels, hop {plan.hop} (oversampling {plan.oversampling:.4g}), "
         f"each at {engineering(plan.channel_rate, 'S/s')}"
     )
 
 
-def _plan_data(plan):
+def plan_data(plan):
+    """A plan for JSON."""
     return {
         "sample_rate_hz": plan.sample_rate,
         "channels": plan.channels,
@@ -219,10 +131,10 @@ def _prototype(options, plan):
         return Prototype.load(options.prototype)
     if options.bare:
         return boxcar_prototype(plan.channels)
-    return _keeping_apart(options, plan, options.rejection)
+    return keeping_apart(options, plan, options.rejection)
 
 
-def _keeping_apart(options, plan, rejection):
+def keeping_apart(options, plan, rejection):
     """A minimax prototype that keeps the occupied bands of neighbours apart."""
     half = _occupied(options, plan) / plan.spacing / 2
     if not half < 0.5:
@@ -242,7 +154,8 @@ def _keeping_apart(options, plan, rejection):
     )
 
 
-def _bank(options, plan, prototype):
+def given_bank(options, plan, prototype):
+    """The analysis bank."""
     return AnalysisBank(plan, prototype, dtype=options.dtype)
 
 
@@ -252,6 +165,7 @@ def _progress(options):
 
 def propose(options):
     """The designs that meet a specification, and why nothing cheaper does."""
+    _refuse_picture(options)
     for name in ("sample_rate", "spacing"):
         if getattr(options, name) is None:
             raise ValueError(f"{name} must be given, in hertz")
@@ -287,16 +201,34 @@ def propose(options):
             use += f" --synthesis {back}"
         lines.append(f"The first design is stored; to use it: {use}")
         data["use"] = use
+    if options.picture is not None:
+        _draw(plot_tradeoff(found), options)
+        lines.append(f"trade-off in {options.picture}")
     return "\n".join(lines), data, found.feasible
+
+
+def _refuse_picture(options):
+    """Refuse a place for a picture before any work."""
+    if options.picture is not None:
+        if not options.picture.lower().endswith((".pdf", ".png")):
+            raise ValueError(f"picture must end in .pdf or .png; got {options.picture!r}")
+        refuse_existing(options.picture, options.overwrite)
+
+
+def _draw(ax, options):
+    kind = options.picture[-3:].lower()
+    with whole_file(options.picture, overwrite=options.overwrite) as file:
+        ax.figure.savefig(file, format=kind)
 
 
 def split(options):
     """One recording for each channel."""
-    with _open(options) as recording:
-        plan = _plan(options, recording)
+    _refuse_picture(options)
+    with given_recording(options) as recording:
+        plan = given_plan(options, recording)
         result = split_recording(
             recording,
-            _bank(options, plan, _prototype(options, plan)),
+            given_bank(options, plan, _prototype(options, plan)),
             options.destination,
             select="active" if options.active else options.index,
             frequencies=options.frequency,
@@ -309,7 +241,9 @@ def split(options):
             progress=_progress(options),
             overwrite=options.overwrite,
         )
-    data = {"destination": options.destination, "plan": _plan_data(plan), **result.to_dict()}
+    if options.picture is not None:
+        _draw(plot_activity(result.activity, threshold_db=options.threshold_db), options)
+    data = {"destination": options.destination, "plan": plan_data(plan), **result.to_dict()}
     if len(result):
         text = f"{result}\n{len(result)} channel recordings in {options.destination}"
     else:
@@ -319,8 +253,8 @@ def split(options):
 
 def report(options):
     """Every figure of a bank, and the limits it must meet."""
-    plan = _plan(options)
-    prototype, synthesis = _pair(options, plan)
+    plan = given_plan(options)
+    prototype, synthesis = given_pair(options, plan)
     occupied = _occupied(options, plan)
     found = bank_report(
         plan, prototype, synthesis, occupied_bandwidth=occupied, dtype=options.dtype
@@ -329,7 +263,7 @@ def report(options):
     if options.measured:
         back = None if synthesis is None else SynthesisBank(plan, synthesis, dtype=options.dtype)
         measured = measured_report(
-            _bank(options, plan, prototype), back, occupied_bandwidth=occupied
+            given_bank(options, plan, prototype), back, occupied_bandwidth=occupied
         )
         try:
             found.verify(measured)
@@ -346,12 +280,15 @@ def report(options):
         lines.append(str(check))
         data["limits"] = check.to_dict()
         met = met and check.passed
+    if options.sheet is not None:
+        summary_sheet(found, options.sheet, overwrite=options.overwrite)
+        lines.append(f"summary sheet in {options.sheet}")
     if options.save is not None:
         lines.append(f"prototype in {prototype.save(options.save, overwrite=options.overwrite)}")
     return "\n".join(lines), data, met
 
 
-def _pair(options, plan):
+def given_pair(options, plan):
     """Analysis prototype, and the synthesis prototype where one is asked for."""
     if options.pair is not None:
         return prototype_pair(plan, *options.pair)
@@ -362,48 +299,3 @@ def _pair(options, plan):
             )
         return _prototype(options, plan), Prototype.load(options.synthesis)
     return _prototype(options, plan), None
-
-
-def rebuild(options):
-    """Take a recording apart, put it back together, and say what is left between the two."""
-    with contextlib.ExitStack() as stack:
-        recording = stack.enter_context(_open(options))
-        plan = _plan(options, recording)
-        if options.pair is None and options.synthesis is None:
-            options.pair = _DEFAULT_PAIR
-        prototype, synthesis = _pair(options, plan)
-        muted = sorted({plan.index_of(place) for place in options.mute})
-        gains = np.ones(plan.output_channels)
-        gains[muted] = 0
-        analysis = _bank(options, plan, prototype)
-        back = SynthesisBank(plan, synthesis, gains=gains, dtype=options.dtype)
-        path = options.output
-        if path is None:
-            path = os.path.join(stack.enter_context(tempfile.TemporaryDirectory()), "rebuilt")
-        write_rebuilt(recording, analysis, back, path, options.overwrite)
-        rebuilt = stack.enter_context(open_recording(path))
-        sharp = _keeping_apart(options, plan, _MEASURING_DB) if muted else None
-        error, left = difference(recording, rebuilt, plan, sharp, back.delay, muted)
-    met = error is None or error <= options.error_db
-    data = {
-        "recording": recording.path,
-        "rebuilt": options.output,
-        "plan": _plan_data(plan),
-        "delay_samples": back.delay,
-        "error_db": error,
-        "limit_db": options.error_db,
-        "passed": met,
-        "muted": [
-            {"channel": k, "frequency_hz": float(plan.frequencies[k]), "left_db": level}
-            for k, level in zip(muted, left, strict=True)
-        ],
-    }
-    lines = [f"{_plan_text(plan)}; both banks delay by {back.delay} samples"]
-    for place in data["muted"]:
-        level = "nothing" if place["left_db"] is None else f"{place['left_db']:.1f} dB"
-        lines.append(f"muted {_place(place['frequency_hz'])}: {level} is left there")
-    what = "all but the muted channels and their neighbours" if muted else "the whole recording"
-    shown = "exactly 0" if error is None else f"{error:.1f} dB"
-    verdict = "pass" if met else "FAIL"
-    lines.append(f"{verdict}  error of {what}: {shown}, at most {options.error_db:g} dB")
-    return "\n".join(lines), data, met

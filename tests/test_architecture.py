@@ -29,7 +29,7 @@ ROOMS = [
 
 def room_of(parts):
     """The room of a module given as the parts of its dotted name after the package."""
-    if not parts or parts[0] in ("__init__", "__main__", "_shell", "_rebuild"):
+    if not parts or parts[0] in ("__init__", "__main__", "_shell", "_describe", "_rebuild"):
         return "face"
     return parts[0]
 

@@ -137,12 +137,31 @@ def test_split_is_the_library_call(capsys, quay, tmp_path):
         assert one.center_frequency == 156.85e6
 
 
+def test_pictures_are_drawn_and_not_replaced(capsys, quay, tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    raster = ["--spacing", "25k", "--bare"]
+    samples = ["--sample-rate", "400k", "--spacing", "25k"]
+    search = [*samples, "--neighbour-rejection", "40", "--oversampling", "4"]
+    for words in (
+        ["split", "quay", "out", *raster, "--index", "1", "--picture", "activity.png"],
+        ["report", *samples, "--bare", "--sheet", "sheet.pdf"],
+        ["propose", *search, "--picture", "tradeoff.pdf"],
+    ):
+        assert run(capsys, *words)[0] == 0
+        kept = (tmp_path / words[-1]).read_bytes()
+        assert kept.startswith(b"%PDF" if words[-1].endswith("pdf") else b"\x89PNG")
+        code, out, err = run(capsys, *words)
+        assert code == 2 and out == "" and "exists" in err and "--overwrite" in err
+        assert (tmp_path / words[-1]).read_bytes() == kept
+
+
 def test_split_prototype_keeps_neighbours_apart(capsys, quay, tmp_path):
     run(capsys, "split", quay, tmp_path / "out", "--spacing", "25k", *FAST, "--index", "0")
     prototype = Prototype.load(tmp_path / "out" / "prototype.npz")
     report = bank_report(ChannelPlan(RATE, 16, 10), prototype)
-    assert report["adjacent_tone"].worst < -60 + 1e-6
-    assert report["passband_ripple"].worst < 0.1 + 1e-6
+    # The report finds extremes over frequency to within 0.001 dB.
+    assert report["adjacent_tone"].worst < -60 + 1e-3
+    assert report["passband_ripple"].worst < 0.1 + 1e-3
 
 
 def test_split_active_channels_and_exit_code(capsys, quay, tmp_path):

@@ -5,8 +5,8 @@ import numpy as np
 from chanbank.metrics import _pair_run
 from chanbank.metrics._drive import Exact
 from chanbank.metrics._tone_run import run_pair_tones, run_tones
+from chanbank.metrics.bands import UNMIRRORED
 from chanbank.metrics.figures import DEFINITIONS, Figure
-from chanbank.metrics.formula import UNMIRRORED
 from chanbank.metrics.report import absent_figure
 
 __all__ = ["measure_bank"]

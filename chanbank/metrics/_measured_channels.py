@@ -5,8 +5,8 @@ import numpy as np
 from chanbank.metrics._noise import BIN_WIDTH, folded_power, noise_power
 from chanbank.metrics._sweep import Lines, sweep, sweep_size
 from chanbank.metrics._tone_run import run_tones
+from chanbank.metrics.bands import neighbours, own_mirrors, worse_of
 from chanbank.metrics.figures import DEFINITIONS, Figure
-from chanbank.metrics.formula import neighbours, own_mirrors, worse_of
 from chanbank.metrics.tones import MeasuredLeakage
 
 __all__ = ["measure_channels"]
@@ -14,8 +14,6 @@ __all__ = ["measure_channels"]
 _RANDOM_TONES = 16
 # What the finite step between lines may cost a figure, in dB.
 _STEP_DB = 0.01
-# A minimum is one when the power rises again by more than rounding: 0.02 dB.
-_RISE = 1.005
 _SIDES = (("_lower", -1), ("_upper", 1))
 _DISTANCES = (
     ("adjacent_leakage_ratio", "adjacent_tone", 1),
@@ -132,7 +130,7 @@ class _Channels:
         if edge < self.driver.channels / 2:
             asked["stop"] = [self.ask(centre + s * edge * spacing) for s in (-1, 1)]
             asked["stop"] += self._ask_peak(row, lambda offset, edge=edge: np.abs(offset) > edge)
-        start = self._first_minimum(row)
+        start = self.lines.first_minima(row) if self.whole else None
         if start is not None:
             lower, upper = start
             asked["sidelobe"] = self._ask_peak(
@@ -177,49 +175,6 @@ class _Channels:
         step = offset[1] - offset[0]
         return self.ask(origin + (offset[at] + shift * step) * self.spacing)
 
-    def _centre_power(self, row):
-        """Power at the line nearest to the centre, before any tone has run."""
-        offset, power = self.lines.shifted(row)
-        return power[np.abs(offset).argmin()]
-
-    def _crossings(self, row, factor, reference):
-        """Offsets below and above the centre where the power first falls to factor * reference."""
-        offset, power = self.lines.shifted(row)
-        middle = int(np.abs(offset).argmin())
-        found = []
-        for step in (-1, 1):
-            index = np.arange(middle, -1 if step < 0 else len(offset), step)
-            below = np.flatnonzero(~(power[index] >= factor * reference))
-            if not len(below) or below[0] == 0 or np.isnan(power[index[below[0]]]):
-                return None
-            here, last = index[below[0]], index[below[0] - 1]
-            level = np.log(factor * reference)
-            a, b = np.log(power[last]), np.log(max(power[here], np.finfo(float).tiny))
-            share = (level - a) / (b - a)
-            found.append(float(abs(offset[last] + share * (offset[here] - offset[last]))))
-        return found
-
-    def _first_minimum(self, row):
-        """Offsets of the first minima outside the -6 dB points, below and above."""
-        if not self.whole:
-            return None
-        crossings = self._crossings(row, 0.25, self._centre_power(row))
-        if crossings is None:
-            return None
-        offset, power = self.lines.shifted(row)
-        found = []
-        for sign, start in zip((-1, 1), crossings, strict=True):
-            side = np.flatnonzero(sign * offset > start)
-            side = side[np.argsort(sign * offset[side])]
-            levels = power[side]
-            valleys = np.flatnonzero((levels[1:-1] <= levels[:-2]) & (levels[1:-1] < levels[2:]))
-            ahead = np.maximum.accumulate(levels[::-1])[::-1]
-            valleys = valleys[ahead[1 + valleys] > _RISE * levels[1 + valleys]]
-            if not len(valleys):
-                return None
-            found.append(float(abs(offset[side[1 + valleys[0]]])))
-        return found
-
     # The answers: name -> (value, reason for its absence, uncertainty).
 
     def _answer_channel(self, row, asked):
@@ -261,7 +216,7 @@ class _Channels:
             scale = self.driver.channels / centre
             yield "enbw", (power * scale, "", spread * scale)
         for name, factor in (("bandwidth_3db", 0.5), ("bandwidth_6db", 0.25)):
-            crossings = self._crossings(row, factor, centre)
+            crossings = self.lines.crossings(row, factor, centre)
             if crossings is None:
                 yield name, (np.nan, "the response never falls that far", None)
             else:
@@ -276,21 +231,7 @@ class _Channels:
                 yield name, (np.nan, reason, None)
             else:
                 yield name, self._decibels(self._largest(row, asked[key]), centre)
-        yield "delay_spread", (*self._delay_spread(row, band), None)
-
-    def _delay_spread(self, row, band):
-        """Spread of the slope of the phase over steps of two lines, the band's ends included."""
-        lines = np.arange(band.first - 1, band.first + len(band.lines) + 1) % self.lines.period
-        values = self.lines.responses[row, lines]
-        turns = np.angle(values[2:] * values[:-2].conj())
-        # The bulk delay turns the phase many times: take the spread around the mean turn.
-        mean = np.angle(np.exp(1j * turns).mean())
-        around = np.angle(np.exp(1j * (turns - mean)))
-        slope = around * self.lines.period / (4 * np.pi)
-        # Slopes sit on band.lines, of which the first and last lie at or outside the ends.
-        slope[0] += band.head * (slope[1] - slope[0])
-        slope[-1] += band.tail * (slope[-2] - slope[-1])
-        return float(np.ptp(slope)), ""
+        yield "delay_spread", (self.lines.delay_spread(row, band), "", None)
 
     def power_from(self, row, j):
         """Power of a signal in channel j in this output, in channel spacings; NaN if not run."""

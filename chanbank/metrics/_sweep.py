@@ -14,6 +14,9 @@ __all__ = ["Band", "Lines", "sweep", "sweep_size"]
 # Lines per lobe of the response (1/L wide), and per channel spacing at least.
 _PER_LOBE, _PER_SPACING = 32, 256
 
+# A minimum is one when the power rises again by more than rounding: 0.02 dB.
+_RISE = 1.005
+
 
 def sweep_size(driver):
     """Frames N in one period, so that T = N D lines are close enough."""
@@ -155,3 +158,58 @@ class Lines:
             total[r] += after
             after = after + folded[r]
         return total.ravel()
+
+    def centre_power(self, row):
+        """Power at the line nearest to the centre, before any tone has run."""
+        offset, power = self.shifted(row)
+        return power[np.abs(offset).argmin()]
+
+    def crossings(self, row, factor, reference):
+        """Offsets below and above the centre where the power first falls to factor * reference."""
+        offset, power = self.shifted(row)
+        middle = int(np.abs(offset).argmin())
+        found = []
+        for step in (-1, 1):
+            index = np.arange(middle, -1 if step < 0 else len(offset), step)
+            below = np.flatnonzero(~(power[index] >= factor * reference))
+            if not len(below) or below[0] == 0 or np.isnan(power[index[below[0]]]):
+                return None
+            here, last = index[below[0]], index[below[0] - 1]
+            level = np.log(factor * reference)
+            a, b = np.log(power[last]), np.log(max(power[here], np.finfo(float).tiny))
+            share = (level - a) / (b - a)
+            found.append(float(abs(offset[last] + share * (offset[here] - offset[last]))))
+        return found
+
+    def first_minima(self, row):
+        """Offsets of the first minima outside the -6 dB points, below and above."""
+        crossings = self.crossings(row, 0.25, self.centre_power(row))
+        if crossings is None:
+            return None
+        offset, power = self.shifted(row)
+        found = []
+        for sign, start in zip((-1, 1), crossings, strict=True):
+            side = np.flatnonzero(sign * offset > start)
+            side = side[np.argsort(sign * offset[side])]
+            levels = power[side]
+            valleys = np.flatnonzero((levels[1:-1] <= levels[:-2]) & (levels[1:-1] < levels[2:]))
+            ahead = np.maximum.accumulate(levels[::-1])[::-1]
+            valleys = valleys[ahead[1 + valleys] > _RISE * levels[1 + valleys]]
+            if not len(valleys):
+                return None
+            found.append(float(abs(offset[side[1 + valleys[0]]])))
+        return found
+
+    def delay_spread(self, row, band):
+        """Spread of the slope of the phase over steps of two lines, the band's ends included."""
+        lines = np.arange(band.first - 1, band.first + len(band.lines) + 1) % self.period
+        values = self.responses[row, lines]
+        turns = np.angle(values[2:] * values[:-2].conj())
+        # The bulk delay turns the phase many times: take the spread around the mean turn.
+        mean = np.angle(np.exp(1j * turns).mean())
+        around = np.angle(np.exp(1j * (turns - mean)))
+        slope = around * self.period / (4 * np.pi)
+        # Slopes sit on band.lines, of which the first and last lie at or outside the ends.
+        slope[0] += band.head * (slope[1] - slope[0])
+        slope[-1] += band.tail * (slope[-2] - slope[-1])
+        return float(np.ptp(slope))

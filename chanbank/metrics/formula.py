@@ -1,7 +1,5 @@
 """The report by formula: every figure from the coefficients."""
 
-import math
-
 import numpy as np
 
 from chanbank._blas import one_blas_thread
@@ -10,41 +8,32 @@ from chanbank._checks import (
     Instance,
     Integer,
     Optional,
-    OwnCheck,
     Real,
     checked,
-    wrong_type,
     wrong_value,
 )
 from chanbank.metrics._shape import Shape, alias_levels, decibels
-from chanbank.metrics.cost import bank_cost, converter_cost, state_bytes
+from chanbank.metrics._whole_bank import cost_figures, frame_figures, pair_figures
+from chanbank.metrics.bands import (
+    OCCUPIED,
+    neighbours,
+    occupied_bands,
+    own_mirrors,
+    same_channels,
+    worse_of,
+)
 from chanbank.metrics.figures import DEFINITIONS, Figure
 from chanbank.metrics.leakage import LeakageMatrix
 from chanbank.metrics.report import BankReport, absent_figure
 from chanbank.metrics.system import SystemResponse
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
-from chanbank.synthesis.condition import noise_gain, pair_delay_of, residual
-from chanbank.synthesis.frames import frame_bounds
+from chanbank.synthesis.condition import pair_delay_of, residual
 
-__all__ = ["bank_report", "occupied_bands", "same_channels"]
-
-# Each distinct bandwidth costs one pass over the prototype.
-_MOST_WIDTHS = 64
-
-# Up to here the bank's polyphase matrices are small, and frame bounds take a fraction of a second.
-_MOST_COLUMNS = 96
+__all__ = ["bank_report"]
 
 # Band integrals and responses keep their digits down to here, relative to the strongest.
 _FLOOR_DB = -290.0
-
-OCCUPIED = OwnCheck(
-    "None, a bandwidth in hertz, or one bandwidth for each output channel",
-    ("wide", TypeError),
-    (0.0, ValueError),
-    (float("nan"), ValueError),
-    (True, TypeError),
-)
 
 
 @checked(
@@ -158,9 +147,9 @@ def bank_report(
         left = residual(plan, prototype, synthesis_prototype, pair_delay)
         responses = left.values + (left.shifts == 0)
         system = SystemResponse(plan.channels, left.shifts, responses, pair_delay)
-        figures |= _of_pair(plan, prototype, synthesis_prototype, system, float(edges.max()))
-    figures |= _of_frame(plan, prototype)
-    figures |= _of_cost(plan, prototype, synthesis_prototype, pair_delay, dtype)
+        figures |= pair_figures(plan, prototype, synthesis_prototype, system, float(edges.max()))
+    figures |= frame_figures(plan, prototype)
+    figures |= cost_figures(plan, prototype, synthesis_prototype, pair_delay, dtype)
     for name, definition in DEFINITIONS.items():
         if name not in figures and definition.scope == "bank":
             figures[name] = absent_figure(name, "no synthesis prototype given", len(bands))
@@ -178,42 +167,6 @@ def bank_report(
         floor_db=_FLOOR_DB,
         dtype=dtype,
     )
-
-
-def same_channels(name, plan, prototype):
-    """Refuse a prototype for another number of channels than the plan's."""
-    if prototype.channels != plan.channels:
-        raise ValueError(
-            f"{name} and plan must have the same number of channels; got a prototype for "
-            f"{prototype.channels} and a plan of {plan.channels}"
-        )
-
-
-def occupied_bands(plan, given):
-    """The occupied bandwidth in hertz of each output channel."""
-    count = plan.output_channels
-    if given is None:
-        return np.full(count, 0.8 * plan.spacing)
-    accepted = (
-        f"a bandwidth in hertz, or one for each of the {count} output channels, above 0 and at "
-        f"most the channel rate, {plan.channel_rate:.12g} Hz"
-    )
-    try:
-        array = np.asarray(given)
-    except ValueError:
-        raise wrong_value("occupied_bandwidth", accepted, given) from None
-    if array.dtype.kind not in "iuf":
-        raise wrong_type("occupied_bandwidth", accepted, given)
-    array = array.astype(float)
-    inside = (array > 0) & (array <= plan.channel_rate * (1 + 1e-12))
-    if array.shape not in ((), (count,)) or not inside.all():
-        raise wrong_value("occupied_bandwidth", accepted, given)
-    if len(np.unique(array)) > _MOST_WIDTHS:
-        raise ValueError(
-            f"occupied_bandwidth must hold at most {_MOST_WIDTHS} different bandwidths; "
-            f"got {len(np.unique(array))}"
-        )
-    return np.broadcast_to(array, (count,)).copy()
 
 
 def _figure(name, values, reasons=None):
@@ -282,21 +235,7 @@ def _aliases(plan, shape, bands):
     return {name: _figure(name, values) for name, values in zip(_ALIAS, (worst, mean), strict=True)}
 
 
-UNMIRRORED = "the channels of a real plan mirror each other only at offsets of k/2"
 _ALIAS = ("alias_worst", "alias_mean")
-
-
-def neighbours(plan, step):
-    """Positions of the channels `step` above each output channel; -1 with a reason where none."""
-    count = plan.output_channels
-    here = np.arange(count)
-    if not plan.real:
-        if step % plan.channels == 0:
-            return np.full(count, -1), f"with {plan.channels} channels that is the channel itself"
-        return (here + step) % plan.channels, ""
-    there = here + step
-    reason = "no such channel: beyond the band of real samples there is only its mirror image"
-    return np.where((there >= 0) & (there < count), there, -1), reason
 
 
 def _of_leakage(plan, shape, leakage, bands):
@@ -337,23 +276,6 @@ def _of_leakage(plan, shape, leakage, bands):
     return found
 
 
-def worse_of(name, found):
-    """The worse of the two sides; absent only where both are."""
-    lower, upper = found[name + "_lower"], found[name + "_upper"]
-    pick = np.fmin if DEFINITIONS[name].better == "higher" else np.fmax
-    values = pick(lower.values, upper.values)
-    reasons = {int(k): lower.reason(int(k)) for k in np.flatnonzero(np.isnan(values))}
-    if len(reasons) == len(values) and len(set(reasons.values())) == 1:
-        reasons = {None: reasons[0]}
-    return _figure(name, values, reasons)
-
-
-def own_mirrors(plan):
-    """True for each channel of a real plan that is its own mirror image."""
-    twice = (2 * (plan.dft_index + plan.exact_offset)) % plan.channels
-    return np.array(twice == 0, bool)
-
-
 def _images(plan, leakage, count):
     if not plan.real:
         return absent_figure("image_rejection", "complex input has no mirror image", count)
@@ -363,67 +285,3 @@ def _images(plan, leakage, count):
     values[same] = np.nan
     reason = "the channel is its own mirror image"
     return _figure("image_rejection", values, {int(k): reason for k in np.flatnonzero(same)})
-
-
-def _of_pair(plan, prototype, synthesis, system, edge):
-    low, high = system.distortion_extremes()
-    fast, slow = system.delay_extremes()
-    stop = Shape(synthesis.taps, plan.channels)
-    level = stop.beyond(edge)
-    values = {
-        "distortion_ripple": float(decibels(high) - decibels(low)),
-        "distortion_delay_spread": slow - fast,
-        "alias_transfer_peak": float(decibels(system.worst_alias())),
-        "alias_transfer_sum": float(decibels(system.worst_alias_sum())),
-        "reconstruction_error": float(decibels(system.white_error())),
-        "reconstruction_error_peak": float(decibels(system.worst_error())),
-        "impulse_spread": float(decibels(system.spread())),
-        "synthesis_stopband": _level(level, stop.centre),
-        "noise_gain": float(2 * decibels(noise_gain(plan, prototype, synthesis))),
-    }
-    found = {}
-    for name, value in values.items():
-        if np.isnan(value):
-            reason = "the stopband edge lies at or beyond half the sample rate"
-            found[name] = absent_figure(name, reason, 1)
-        else:
-            found[name] = _figure(name, value)
-    if plan.hop == 1:
-        for name in ("alias_transfer_peak", "alias_transfer_sum", "impulse_spread"):
-            found[name] = absent_figure(name, "hop 1: the pair does not vary with time", 1)
-    return found
-
-
-def _of_frame(plan, prototype):
-    names = ("frame_lower", "frame_upper", "frame_ratio")
-    if plan.real and (2 * plan.exact_offset).denominator != 1:
-        return {name: absent_figure(name, UNMIRRORED, 1) for name in names}
-    if plan.hop // math.gcd(plan.channels, plan.hop) > _MOST_COLUMNS:
-        reason = (
-            f"hop / gcd(channels, hop) is above {_MOST_COLUMNS}, which takes up to minutes: "
-            "call frame_bounds(plan, prototype)"
-        )
-        return {name: absent_figure(name, reason, 1) for name in names}
-    bounds = frame_bounds(plan, prototype)
-    values = (bounds.lower, bounds.upper, bounds.condition)
-    return {name: _figure(name, value) for name, value in zip(names, values, strict=True)}
-
-
-def _of_cost(plan, prototype, synthesis, pair_delay, dtype):
-    total = bank_cost(plan, prototype.length)
-    apart = converter_cost(plan, prototype.length)
-    latency, span = prototype.delay, None
-    if synthesis is not None:
-        total, span = total + bank_cost(plan, synthesis.length), synthesis.length
-        apart = apart + converter_cost(plan, synthesis.length)
-        latency = pair_delay
-    values = {
-        "multiplications": total.multiplications,
-        "additions": total.additions,
-        "converter_multiplications": apart.multiplications,
-        "converter_additions": apart.additions,
-        "latency": latency,
-        "latency_seconds": latency / plan.sample_rate,
-        "state": state_bytes(plan, prototype.length, span, dtype),
-    }
-    return {name: _figure(name, value) for name, value in values.items()}

@@ -8,8 +8,8 @@ from chanbank.metrics._drive import Driver
 from chanbank.metrics._measured_bank import measure_bank
 from chanbank.metrics._measured_channels import measure_channels
 from chanbank.metrics._tone_run import run_noise, run_synthesis_noise
+from chanbank.metrics.bands import OCCUPIED, occupied_bands
 from chanbank.metrics.figures import DEFINITIONS
-from chanbank.metrics.formula import OCCUPIED, occupied_bands
 from chanbank.metrics.report import BankReport, absent_figure
 
 __all__ = ["measured_report"]

@@ -3,7 +3,7 @@
 import numpy as np
 
 from chanbank._checks import Choice, Instance, Integer, Optional, Real, checked
-from chanbank.metrics.formula import same_channels
+from chanbank.metrics.bands import same_channels
 from chanbank.plan import ChannelPlan
 from chanbank.plots.style import AX, PALE, SHADE, hertz_axis, line, new_axes, tidy
 from chanbank.prototype.prototype import Prototype

@@ -26,7 +26,10 @@ __all__ = [
     "tidy",
 ]
 
-INK, SHADE, FAINT, PALE = "#1a1a1a", "#5f5f5f", "#9a9a9a", "#c9c9c9"
+INK = "#1a1a1a"
+SHADE = "#5f5f5f"
+FAINT = "#9a9a9a"
+PALE = "#c9c9c9"
 MAP = "cividis"
 _COLOURS = (INK, "#0072b2", "#d55e00", "#009e73", "#cc79a7", "#e69f00")
 _PATTERNS = ("-", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 1.5, 1.5, 1.5)), (0, (1, 1)), (0, (10, 3)))

@@ -36,7 +36,7 @@ def reports():
     yield measured_report(AnalysisBank(plan, h), SynthesisBank(plan, g), channels=[2, 5])
 
 
-@pytest.mark.parametrize("report", reports(), ids=["pair", "real", "offset", "measured"])
+@pytest.mark.parametrize("report", list(reports()), ids=["pair", "real", "offset", "measured"])
 def test_a_report_survives_json(report):
     text = json.dumps(report.to_dict(), allow_nan=False)
     twin = BankReport.from_dict(json.loads(text))

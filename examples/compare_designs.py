@@ -15,6 +15,7 @@ from chanbank import (
     compare_reports,
     equiripple_prototype,
     kaiser_prototype,
+    summary_sheet,
     window_prototype,
 )
 
@@ -49,6 +50,9 @@ def main(arguments=None):
     good = [r for r, check in zip(reports, checks, strict=True) if check.passed]
     chosen = min(good, key=lambda report: report.multiplications)
     print(f"\nchosen: {chosen.prototype.label}, {chosen.prototype.taps_per_branch} taps per branch")
+    if options.sheet:
+        summary_sheet(chosen, options.sheet)
+        print(f"summary sheet in {options.sheet}")
     return chosen
 
 

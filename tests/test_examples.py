@@ -12,6 +12,7 @@ FOLDER = pathlib.Path(__file__).parent.parent / "examples"
 # Options that keep an example short, or make it write what it can.
 OPTIONS = {
     "antennas": ["--save", "{out}/picture.png"],
+    "compare_designs": ["--sheet", "{out}/sheet.pdf"],
     "excise": ["--save", "{out}/picture.png", "--output", "{out}/cleaned"],
     "harbour": ["--seconds", "3", "--folder", "{out}/harbour"],
     "live_stream": ["--seconds", "0.6"],
@@ -29,6 +30,7 @@ def results():
 @pytest.mark.parametrize("name", NAMES)
 def test_main_runs(name, tmp_path, monkeypatch, capsys, results):
     monkeypatch.chdir(tmp_path)
+    monkeypatch.syspath_prepend(FOLDER)  # as if run as a script
     spec = importlib.util.spec_from_file_location(f"example_{name}", FOLDER / f"{name}.py")
     module = importlib.util.module_from_spec(spec)
     spec.loader.exec_module(module)

@@ -19,6 +19,11 @@ from chanbank.metrics.measured import measured_report
 from chanbank.metrics.report import BankReport
 from chanbank.metrics.verify import ReportDisagreement
 from chanbank.plan import ChannelPlan
+from chanbank.plots.activity import plot_activity
+from chanbank.plots.prototype import plot_channels, plot_prototype
+from chanbank.plots.report import plot_distortion, plot_error, plot_leakage
+from chanbank.plots.sheet import summary_sheet
+from chanbank.plots.tradeoff import plot_tradeoff
 from chanbank.prototype.boxcar import boxcar_prototype
 from chanbank.prototype.energy import energy_prototype
 from chanbank.prototype.equiripple import equiripple_prototype
@@ -96,10 +101,18 @@ __all__ = [
     "noise_report",
     "nyquist_prototype",
     "open_recording",
+    "plot_activity",
+    "plot_channels",
+    "plot_distortion",
+    "plot_error",
+    "plot_leakage",
+    "plot_prototype",
+    "plot_tradeoff",
     "prototype_pair",
     "quantised",
     "rounding_floor_db",
     "split_recording",
+    "summary_sheet",
     "tight_prototype",
     "white_error",
     "window_prototype",

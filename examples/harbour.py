@@ -15,10 +15,15 @@ import numpy as np
 from scipy import signal
 from scipy.interpolate import CubicSpline
 
-from chanbank import AnalysisBank, ChannelPlan, boxcar_prototype
-from chanbank.prototype.kaiser import kaiser_prototype
-from chanbank.recordings import SigMFWriter, open_recording
-from chanbank.splitting import split_recording
+from chanbank import (
+    AnalysisBank,
+    ChannelPlan,
+    SigMFWriter,
+    boxcar_prototype,
+    kaiser_prototype,
+    open_recording,
+    split_recording,
+)
 
 RATE, CENTER, SPACING = 4.8e6, 158e6, 25e3
 DEVIATION = 3e3  # of the frequency modulation, in hertz at the voice's peak

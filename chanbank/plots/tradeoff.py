@@ -28,7 +28,8 @@ def plot_tradeoff(search, *, ax=None, x="cost", y="latency", names=True):
     """Draw all candidates of a search: what each costs, which pass, and which were chosen.
 
     Filled marks passed, hollow ones failed a limit; the shape says how the prototype was
-    designed; the designs that no other beats in every respect are ringed and joined.
+    designed. The designs that no other beats in every respect are ringed; those that no other
+    beats in the two respects drawn are joined.
 
     Parameters
     ----------
@@ -39,7 +40,7 @@ def plot_tradeoff(search, *, ax=None, x="cost", y="latency", names=True):
     x, y : {"cost", "latency", "memory", "margin"}
         What to draw against what; by default latency over cost.
     names : bool, default True
-        Write M, D and P beside the chosen designs.
+        Write M, D and P beside the designs that are joined.
 
     Returns
     -------
@@ -70,17 +71,21 @@ def plot_tradeoff(search, *, ax=None, x="cost", y="latency", names=True):
         ax.scatter([], [], s=26, marker=mark, facecolors=SHADE, edgecolors=SHADE, label=method)
     ax.scatter([], [], s=26, marker="o", facecolors="none", edgecolors=FAINT, label="fails a limit")
     chosen = np.flatnonzero(held["chosen"])
+    front = _front(chosen, *(-held[key] if key == "margin" else held[key] for key in (x, y)))
     if len(chosen):
-        line = chosen[np.argsort(across[chosen], kind="stable")]
-        ax.plot(across[line], up[line], color=INK, linewidth=0.8, linestyle=(0, (2, 2)), zorder=1)
+        ax.plot(across[front], up[front], color=INK, linewidth=0.8, linestyle=(0, (2, 2)), zorder=1)
         ax.scatter(across[chosen], up[chosen], s=90, facecolors="none", edgecolors=INK,
                    linewidths=1.3, zorder=4, label="not beaten")  # fmt: skip
+    # Where margin rises with cost, the room beside a mark is on its left.
+    left = "margin" in (x, y)
     if names:
-        for place in chosen:
+        ax.margins(x=0.3 if left else 0.1)
+        for place in front:
             plan = search.tried[place].plan
             text = f"M {plan.channels}, D {plan.hop}, P {search.tried[place].taps_per_branch}"
-            ax.annotate(text, (across[place], up[place]), xytext=(7, 5),
-                        textcoords="offset points", fontsize=7, color=INK)  # fmt: skip
+            ax.annotate(text, (across[place], up[place]), xytext=(-8 if left else 7, 4),
+                        textcoords="offset points", ha="right" if left else "left",
+                        fontsize=7, color=INK)  # fmt: skip
     for axis, key, values in (("x", x, across), ("y", y, up)):
         # Costs of designs differ by factors: equal factors, equal distances.
         if key != "margin" and values.min() > 0 and values.max() > 4 * values.min():
@@ -88,3 +93,12 @@ def plot_tradeoff(search, *, ax=None, x="cost", y="latency", names=True):
     count, good = len(across), int(held["passed"].sum())
     title = f"{count} designs tried, {good} keep every limit"
     return tidy(ax, title=title, x=_AXES[x][0], y=_AXES[y][0], legend="beside")
+
+
+def _front(chosen, first, second):
+    """Those of the chosen that no other beats in both respects (less is better), in order."""
+    front = []
+    for place in chosen[np.lexsort((second[chosen], first[chosen]))]:
+        if not front or second[place] < second[front[-1]]:
+            front.append(place)
+    return np.array(front, int)

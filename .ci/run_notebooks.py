@@ -20,6 +20,7 @@ def run(path, write):
             notebook,
             timeout=LIMIT_SECONDS,
             kernel_name="python3",
+            coalesce_streams=True,
             resources={"metadata": {"path": folder}},
         )
         started = time.monotonic()

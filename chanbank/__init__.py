@@ -5,7 +5,7 @@ from chanbank.analysis.bank import AnalysisBank
 from chanbank.analysis.summary import ChannelRecording, SplitResult
 from chanbank.fixedpoint.bank import FixedPointBank, FixedPointFrames
 from chanbank.fixedpoint.export import export_coefficients
-from chanbank.fixedpoint.noise import NoiseReport, dft_rounding_db, noise_report
+from chanbank.fixedpoint.noise import NoiseReport, dft_rounding_db
 from chanbank.fixedpoint.quantise import (
     QuantisedPrototype,
     quantised,
@@ -98,7 +98,6 @@ __all__ = [
     "measure_activity",
     "measured_report",
     "noise_gain",
-    "noise_report",
     "nyquist_prototype",
     "open_recording",
     "plot_activity",

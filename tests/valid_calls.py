@@ -1,5 +1,6 @@
 """One valid call of every public callable that takes parameters, for the sweep of bad values."""
 
+import functools
 import inspect
 
 import numpy as np
@@ -100,6 +101,7 @@ def fold_limits(**limits):
     return chanbank.Limits(**{"latency_seconds": 1e6, **limits})
 
 
+@functools.cache
 def pair():
     return chanbank.prototype_pair(plan(), 3)
 
@@ -112,17 +114,25 @@ def specification():
     return chanbank.Specification(200e3, 25e3, occupied_bandwidth=16e3, neighbour_rejection=40)
 
 
+@functools.cache
+def search():
+    return chanbank.find_designs(specification(), progress=False)
+
+
+def design():
+    return search().designs[0]
+
+
+def paired_report():
+    return chanbank.bank_report(plan(), *pair())
+
+
 def coefficients():
     return chanbank.quantised(chanbank.window_prototype(8, 4, "hann"), 12)
 
 
 def fixed_bank():
     return chanbank.FixedPointBank(plan(), coefficients())
-
-
-def noise_arguments():
-    made = fixed_bank()
-    return {"bank": made, "samples": 0.1 * X, "result": made(0.1 * X)}
 
 
 X = np.ones(12, "complex64")
@@ -320,7 +330,6 @@ VALID = {
         chanbank.find_designs,
         {"specification": specification(), "progress": False},
     ),
-    "noise_report": lambda _: (chanbank.noise_report, noise_arguments()),
     "quantised": lambda _: (
         chanbank.quantised,
         {"prototype": chanbank.window_prototype(8, 4, "hann"), "bits": 12},
@@ -332,5 +341,25 @@ VALID = {
     "word_length": lambda _: (
         chanbank.word_length,
         {"prototype": chanbank.window_prototype(8, 4, "hann"), "stopband": 1.5, "stopband_db": 40},
+    ),
+    "Design.measured": lambda _: (design().measured, {"seed": 1}),
+    "Specification.bandwidth": lambda _: (specification().bandwidth, {"plan": plan()}),
+    "Specification.plans": lambda _: (specification().plans, {"channels": 8}),
+    "plot_activity": lambda tmp: (chanbank.plot_activity, {"activity": activity(tmp)}),
+    "plot_channels": lambda _: (
+        chanbank.plot_channels,
+        {"plan": plan(), "prototype": chanbank.boxcar_prototype(8)},
+    ),
+    "plot_distortion": lambda _: (chanbank.plot_distortion, {"report": paired_report()}),
+    "plot_error": lambda _: (chanbank.plot_error, {"report": paired_report()}),
+    "plot_leakage": lambda _: (chanbank.plot_leakage, {"report": report()}),
+    "plot_prototype": lambda _: (
+        chanbank.plot_prototype,
+        {"prototype": chanbank.boxcar_prototype(8)},
+    ),
+    "plot_tradeoff": lambda _: (chanbank.plot_tradeoff, {"search": search()}),
+    "summary_sheet": lambda tmp: (
+        chanbank.summary_sheet,
+        {"report": report(), "path": tmp / "sheet.png"},
     ),
 }

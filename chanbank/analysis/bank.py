@@ -88,7 +88,8 @@ class AnalysisBank:
     -----
     Samples are arrays whose last axis is time; leading axes are antennas or polarisations. A
     complex plan takes complex or real floats, or integers (int8, uint8, int16) interleaved I/Q
-    along the last axis, 2 N long; a real plan takes real floats or integers. A real tone of
+    along the last axis, 2 N long (an array of shape (N, 2) would be N antennas: ravel it first); a
+    real plan takes real floats or integers. A real tone of
     amplitude A leaves its channel with A/2 (A at zero frequency and at half the sample rate).
     Samples of higher precision than the bank are refused, lower ones widened. Samples that are
     not finite pass through to the frames whose window (the prototype's length rounded up to whole

@@ -23,6 +23,13 @@ __all__ = ["FixedPointBank", "FixedPointFrames"]
 
 _BLOCK = 1 << 18
 
+_SAMPLES = OwnCheck(
+    "a one-dimensional array of finite numbers",
+    ("text", TypeError),
+    (np.ones((2, 2)), ValueError),
+    ([float("nan")], ValueError),
+)
+
 _SCALING = (
     'a scaling: "stages" (1/2 at each stage), "input" (1/M before the first), "none", or one shift '
     "of 0 or 1 per stage"
@@ -41,6 +48,10 @@ class FixedPointFrames:
         Value of one unit of the last place, full scale of the samples being 1.
     overflows : dict
         How many values did not fit, at "samples", "accumulator", "fold" and "stage 1" ...
+
+    Examples
+    --------
+    See `FixedPointBank`.
     """
 
     integers: np.ndarray
@@ -195,6 +206,7 @@ class FixedPointBank:
         places = self._fold_shift + self._input_shift + sum(self._shifts)
         return self._coefficients.step * 2.0 ** (places - self._settings["sample_bits"] + 1)
 
+    @checked(samples=_SAMPLES, call=False)
     def quantise(self, samples):
         """Samples as the words that the bank receives.
 
@@ -209,6 +221,16 @@ class FixedPointBank:
             int64, rounded to nearest, saturated at full scale.
         lost : int
             How many did not fit.
+
+        Raises
+        ------
+        TypeError, ValueError
+            Samples that are not a one-dimensional array of finite numbers, or complex ones on a
+            real plan.
+
+        Examples
+        --------
+        See the class.
         """
         array = np.asarray(samples)
         if array.ndim != 1 or array.dtype.kind not in "iufc":
@@ -225,6 +247,7 @@ class FixedPointBank:
         held = [word.store(np.clip(part, -(2.0**62), 2.0**62).astype(np.int64)) for part in parts]
         return held[0][0], held[1][0], held[0][1] + held[1][1]
 
+    @checked(samples=_SAMPLES, call=False)
     def __call__(self, samples):
         """Run the bank over a whole signal.
 
@@ -243,6 +266,10 @@ class FixedPointBank:
         TypeError, ValueError
             Samples that are not a one-dimensional array of finite numbers, or complex ones on a
             real plan.
+
+        Examples
+        --------
+        See the class.
         """
         real, imag, lost = self.quantise(samples)
         channels, hop = self._plan.channels, self._plan.hop
@@ -294,6 +321,7 @@ class FixedPointBank:
             held = np.take_along_axis(held, order, axis=1)
         return held
 
+    @checked(samples=_SAMPLES, call=False)
     def noise(self, samples):
         """Run the bank beside double precision and say where the noise comes from.
 
@@ -306,6 +334,15 @@ class FixedPointBank:
         Returns
         -------
         NoiseReport
+
+        Raises
+        ------
+        TypeError, ValueError
+            As `quantise`.
+
+        Examples
+        --------
+        See the class.
         """
         return noise_report(self, samples, self(samples))
 

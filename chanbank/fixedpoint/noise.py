@@ -76,6 +76,10 @@ class NoiseReport:
         "samples" (step^2/12 through the prototype, white).
     overflows : dict
         As in `FixedPointFrames`.
+
+    Examples
+    --------
+    See `FixedPointBank.noise`.
     """
 
     total_db: float
@@ -87,7 +91,12 @@ class NoiseReport:
     overflows: dict
 
     def table(self):
-        """The figures as text."""
+        """The figures as text.
+
+        Examples
+        --------
+        See the class.
+        """
         rows = [
             ("total", self.total_db),
             ("rounded taps", self.coefficients_db),
@@ -106,7 +115,12 @@ class NoiseReport:
         return self.table()
 
     def to_dict(self):
-        """The figures as a dict that JSON can hold; infinities become None."""
+        """The figures as a dict that JSON can hold; infinities become None.
+
+        Examples
+        --------
+        See the class.
+        """
         plain = lambda v: v if math.isfinite(v) else None  # noqa: E731
         names = ("total_db", "coefficients_db", "samples_db", "arithmetic_db", "floor_dbfs")
         held = {name: plain(getattr(self, name)) for name in names}

@@ -5,15 +5,19 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Instance, Integer, Optional, Real, checked
+from chanbank.metrics.bands import OCCUPIED
 from chanbank.metrics.compare import compare_reports
 from chanbank.metrics.formula import bank_report
+from chanbank.plan import ChannelPlan
 from chanbank.prototype._measure import decibels, stopband_peak
 from chanbank.prototype.prototype import Prototype
 
 __all__ = ["QuantisedPrototype", "quantised", "rounding_floor_db", "word_length"]
 
 _BITS = Integer(2, 32)
+_EDGE = Optional(Real(0))
 
 # Scalings tried from the largest that fits down to half of it; below half, one bit is wasted.
 _SCALINGS = 257
@@ -38,6 +42,10 @@ class QuantisedPrototype:
         Word length, sign included.
     ideal : Prototype
         What was quantised.
+
+    Examples
+    --------
+    See `quantised`.
     """
 
     prototype: Prototype
@@ -47,12 +55,18 @@ class QuantisedPrototype:
     ideal: Prototype
 
     def branches(self):
-        """The integers branch by branch, shape (channels, taps_per_branch)."""
+        """The integers branch by branch, shape (channels, taps_per_branch).
+
+        Examples
+        --------
+        See `quantised`.
+        """
         rows = self.prototype.taps_per_branch
         padded = np.zeros(rows * self.prototype.channels, dtype=np.int64)
         padded[: len(self.integers)] = self.integers
         return np.ascontiguousarray(padded.reshape(rows, self.prototype.channels).T)
 
+    @checked(plan=Instance(ChannelPlan), occupied_bandwidth=OCCUPIED, stopband_edge=_EDGE)
     def reports(self, plan, *, occupied_bandwidth=None, stopband_edge=None):
         """The reports by formula of the ideal and the quantised bank.
 
@@ -65,6 +79,15 @@ class QuantisedPrototype:
         Returns
         -------
         ideal, quantised : BankReport
+
+        Raises
+        ------
+        TypeError, ValueError
+            As `bank_report`.
+
+        Examples
+        --------
+        See `quantised`.
         """
         both = (self.ideal, self.prototype)
         return tuple(
@@ -72,8 +95,29 @@ class QuantisedPrototype:
             for h in both
         )
 
+    @checked(plan=Instance(ChannelPlan), occupied_bandwidth=OCCUPIED, stopband_edge=_EDGE)
     def compare(self, plan, *, occupied_bandwidth=None, stopband_edge=None):
-        """Both reports side by side, as `compare_reports` shows them."""
+        """Both reports side by side, as `compare_reports` shows them.
+
+        Parameters
+        ----------
+        plan : ChannelPlan
+        occupied_bandwidth, stopband_edge
+            As in `bank_report`.
+
+        Returns
+        -------
+        ReportComparison
+
+        Raises
+        ------
+        TypeError, ValueError
+            As `bank_report`.
+
+        Examples
+        --------
+        See `quantised`.
+        """
         ideal, coarse = self.reports(
             plan, occupied_bandwidth=occupied_bandwidth, stopband_edge=stopband_edge
         )
@@ -89,6 +133,7 @@ class QuantisedPrototype:
 @checked(
     prototype=Instance(Prototype), bits=_BITS, stopband=Optional(Real(above=0, unit="spacings"))
 )
+@one_blas_thread
 def quantised(prototype, bits, *, stopband=None):
     """The prototype in integers of `bits` bits, with the best common scaling.
 
@@ -223,6 +268,7 @@ def rounding_floor_db(prototype, bits):
     stopband=Real(above=0, unit="spacings"),
     stopband_db=Real(above=0, unit="dB"),
 )
+@one_blas_thread
 def word_length(prototype, *, stopband, stopband_db):
     """The shortest word whose rounded taps keep the stopband, as a quantised prototype.
 

@@ -33,7 +33,7 @@ def measure_bank(driver, tones, edge, most):
     ]
     asked += driver.rng.random(_PAIR_TONES).tolist()
     run = run_pair_tones(driver, asked, run_tones(driver, asked))
-    figures |= _pair_figures(driver, system, dict(zip(worst, run, strict=False)), run, edge)
+    figures |= _pair_figures(driver, system, run, edge)
     return figures, system, [*tones, *run], notes
 
 
@@ -104,16 +104,14 @@ def _worst_frequencies(system):
     return found
 
 
-def _pair_figures(driver, system, at, run, edge):
+def _pair_figures(driver, system, run, edge):
     epsilon, hop = driver.epsilon, driver.hop
-    gains = {name: np.abs(tone.pair.mean()) ** 2 for name, tone in at.items()}
-    found = {
-        "distortion_ripple": _figure(
-            "distortion_ripple",
-            float(10 * np.log10(gains["strong"] / gains["weak"])),
-            np.hypot(0.005, 8.7 * epsilon / np.sqrt(gains["weak"])),
-        )
-    }
+    # From the impulse answers, since a zero of T_0 lies between any two tones.
+    low, high = system.distortion_extremes()
+    with np.errstate(divide="ignore"):
+        ripple = float(10 * np.log10(high / low))
+    noise = min(1.0, epsilon / max(np.sqrt(low / high), epsilon))
+    found = {"distortion_ripple": _figure("distortion_ripple", ripple, 8.7 * noise)}
     fast, slow = system.delay_extremes()
     found["distortion_delay_spread"] = _figure("distortion_delay_spread", slow - fast, None)
     errors = [float(np.mean(np.abs(tone.pair - 1) ** 2)) for tone in run]

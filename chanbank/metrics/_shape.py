@@ -70,12 +70,14 @@ class Shape:
         index = np.arange(len(self.taps))
         if np.array_equal(self.taps, self.taps[::-1]):
             return 0.0
-        count = 33 + int(32 * half * len(self.taps) / self.channels)
-        points = np.linspace(0, half, count)
-        whole = self.response(points)
-        ramp = Response(self.taps * index, self.channels)(points)
-        delay = (ramp / whole).real
-        return float(delay.max() - delay.min())
+        ramp = Response(self.taps * index, self.channels)
+
+        def delay(points):
+            return (ramp(points) / self.response(points)).real
+
+        step = self.channels / len(self.taps) / 32
+        curve = Curve(delay, step)
+        return curve.maximum(0.0, half)[1] - curve.minimum(0.0, half)[1]
 
 
 def alias_levels(taps, channels, hop, half):

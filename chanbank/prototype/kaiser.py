@@ -5,6 +5,7 @@ import scipy.optimize
 import scipy.signal
 import scipy.special
 
+from chanbank._blas import one_blas_thread
 from chanbank._checks import Integer, Optional, Real, checked
 from chanbank.prototype._measure import band_extremes, decibels, stopband_peak, summit
 from chanbank.prototype.lengths import deviation, require_band_edges, ripple_db
@@ -29,6 +30,7 @@ _SCALED_ABOVE = 4096
     taps_per_branch=Optional(Integer(1)),
     passband_db=Optional(Real(above=0, unit="dB")),
 )
+@one_blas_thread
 def kaiser_prototype(
     channels, *, stopband_db, passband, stopband, taps_per_branch=None, passband_db=None
 ):

@@ -4,10 +4,14 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from chanbank._checks import Integer, checked
+from chanbank.analysis.bank import AnalysisBank
 from chanbank.metrics.figures import DEFINITIONS
+from chanbank.metrics.limits import Limits
 from chanbank.metrics.measured import measured_report
+from chanbank.synthesis.bank import SynthesisBank
 
-__all__ = ["Design"]
+__all__ = ["Design", "judged"]
 
 # Figures whose margin in dB is a margin of rejection; a ripple's is not.
 _LEVELS = {
@@ -45,6 +49,10 @@ class Design:
     margin : float
         Smallest distance in dB to any limit on a level (leakage, aliases, reconstruction); where
         no level is limited, the smallest distance to the limits there are.
+
+    Examples
+    --------
+    See `find_designs`.
     """
 
     method: str
@@ -58,29 +66,9 @@ class Design:
     memory: float
     margin: float
 
-    @classmethod
-    def judged(cls, method, plan, prototype, synthesis, report, limits):
-        """The design with its standing read from its report."""
-        check = limits.check(report)
-        levels = [line.margin for line in check.lines if line.name in _LEVELS]
-        if not levels:
-            levels = [line.margin for line in check.lines]
-        margins = [-np.inf if margin is None else margin for margin in levels]
-        return cls(
-            method,
-            plan,
-            prototype,
-            synthesis,
-            report,
-            check,
-            float(report["multiplications"].worst + report["additions"].worst),
-            float(report["latency_seconds"].worst),
-            float(report["state"].worst),
-            float(min(margins)),
-        )
-
     @property
     def taps_per_branch(self):
+        """P of the analysis prototype."""
         return self.prototype.taps_per_branch
 
     @property
@@ -102,6 +90,7 @@ class Design:
         plan = self.plan
         return f"{self.method}, M {plan.channels}, D {plan.hop}, P {self.taps_per_branch}"
 
+    @checked(seed=Integer(0))
     def measured(self, *, seed=0):
         """The limits held against a measured report: tones and noise through the actual bank.
 
@@ -115,11 +104,11 @@ class Design:
         LimitCheck
             Of the limits on figures that a measurement has (cost and latency are counted, not
             measured).
-        """
-        from chanbank.analysis.bank import AnalysisBank
-        from chanbank.metrics.limits import Limits
-        from chanbank.synthesis.bank import SynthesisBank
 
+        Examples
+        --------
+        See `find_designs`.
+        """
         bounds = {line.name: (line.low, line.high) for line in self.check.lines}
         bounds = {name: pair for name, pair in bounds.items() if DEFINITIONS[name].scope != "cost"}
         bank = AnalysisBank(self.plan, self.prototype)
@@ -130,3 +119,24 @@ class Design:
             bank, back, occupied_bandwidth=self.report.occupied_bandwidth, seed=seed
         )
         return Limits(**bounds).check(report)
+
+
+def judged(method, plan, prototype, synthesis, report, limits):
+    """A design with its standing read from its report."""
+    check = limits.check(report)
+    levels = [line.margin for line in check.lines if line.name in _LEVELS]
+    if not levels:
+        levels = [line.margin for line in check.lines]
+    margins = [-np.inf if margin is None else margin for margin in levels]
+    return Design(
+        method,
+        plan,
+        prototype,
+        synthesis,
+        report,
+        check,
+        float(report["multiplications"].worst + report["additions"].worst),
+        float(report["latency_seconds"].worst),
+        float(report["state"].worst),
+        float(min(margins)),
+    )

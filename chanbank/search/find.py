@@ -4,7 +4,7 @@ from chanbank._blas import one_blas_thread
 from chanbank._checks import Boolean, Instance, Optional, OwnCheck, checked, wrong_type, wrong_value
 from chanbank.metrics.cost import bank_cost, state_bytes
 from chanbank.metrics.formula import bank_report
-from chanbank.search.design import Design
+from chanbank.search.design import judged
 from chanbank.search.methods import METHODS, Bench
 from chanbank.search.result import DesignSearch
 from chanbank.search.specification import Specification
@@ -215,4 +215,4 @@ def _judged(bench, plan, method, branch):
         synthesis,
         occupied_bandwidth=bench.specification.bandwidth(plan),
     )
-    return Design.judged(method, plan, prototype, synthesis, report, bench.specification.limits)
+    return judged(method, plan, prototype, synthesis, report, bench.specification.limits)

@@ -26,6 +26,10 @@ class DesignSearch:
     reason : str
         Why the next cheaper candidate than ``designs[0]`` fails, or, without designs, which limit
         must give and by how much.
+
+    Examples
+    --------
+    See `find_designs`.
     """
 
     def __init__(self, specification, tried):
@@ -101,7 +105,12 @@ class DesignSearch:
         }
 
     def table(self):
-        """The designs as text, cheapest first, with the reason below."""
+        """The designs as text, cheapest first, with the reason below.
+
+        Examples
+        --------
+        See `find_designs`.
+        """
         rows = [_HEAD, *(_row(d) for d in self.designs)]
         if not self.designs:
             return self.reason
@@ -129,7 +138,12 @@ class DesignSearch:
         return table + f"<p>{html.escape(self.reason)}</p>"
 
     def to_dict(self):
-        """The search as a dict that JSON can hold: designs, their checks, and the reason."""
+        """The search as a dict that JSON can hold: designs, their checks, and the reason.
+
+        Examples
+        --------
+        See `find_designs`.
+        """
         return {
             "specification": repr(self.specification),
             "reason": self.reason,

@@ -8,6 +8,7 @@ from chanbank._checks import (
     Boolean,
     Frequency,
     Instance,
+    Integer,
     Optional,
     OwnCheck,
     Rational,
@@ -192,6 +193,7 @@ class Specification:
             real=self.real,
         )
 
+    @checked(channels=Integer(1, 1 << 20))
     def plans(self, channels):
         """The plans of this many channels that keep the rates, the slowest channel rate first.
 
@@ -203,6 +205,15 @@ class Specification:
         Returns
         -------
         list of ChannelPlan
+
+        Raises
+        ------
+        TypeError, ValueError
+            Not an integer from 1 to 2**20.
+
+        Examples
+        --------
+        See `find_designs`.
         """
         base = self._plan(self.sample_rate / channels)
         least = self.oversampling
@@ -229,8 +240,28 @@ class Specification:
             for hop in sorted(hops, reverse=True)
         ]
 
+    @checked(plan=Instance(ChannelPlan))
     def bandwidth(self, plan):
-        """The occupied bandwidth on a plan, hertz."""
+        """The occupied bandwidth on a plan: the one given, or 0.8 of the spacing.
+
+        Parameters
+        ----------
+        plan : ChannelPlan
+
+        Returns
+        -------
+        float
+            Two-sided, in hertz.
+
+        Raises
+        ------
+        TypeError
+            Not a plan.
+
+        Examples
+        --------
+        See `find_designs`.
+        """
         return 0.8 * plan.spacing if self.occupied_bandwidth is None else self.occupied_bandwidth
 
     def __repr__(self):

@@ -80,7 +80,7 @@ class SynthesisBank:
     ------
     TypeError, ValueError
         A parameter of the wrong type or out of range; a prototype for another number of channels
-        or without a pair delay; gains of the wrong shape or not finite; a real plan whose offset
+        or another hop, or without a pair delay; gains of the wrong shape or not finite; a real plan whose offset
         is not a multiple of 1/2.
 
     Notes
@@ -133,6 +133,13 @@ class SynthesisBank:
             raise ValueError(
                 "plan and prototype must have the same number of channels; got a plan of "
                 f"{plan.channels} and a prototype for {prototype.channels}"
+            )
+        hop = prototype.design.get("hop", plan.hop)
+        if hop != plan.hop:
+            raise ValueError(
+                f"plan and prototype must have the same hop; got a plan of hop {plan.hop} and a "
+                f"prototype that was designed to reconstruct at hop {hop}. "
+                "Prototype(prototype.taps, channels, pair_delay=...) uses its taps all the same"
             )
         if pair_delay is None and prototype.pair_delay is None:
             raise ValueError(

@@ -194,14 +194,22 @@ def test_the_sound_bank_passes(formula, seed):
     assert said.verify(measured(Faulty(bank), seed)).agreed
 
 
-@pytest.mark.parametrize("fault", [TapOff, FrameTurned, AntennaLeaks, BorderDropped])
+@pytest.mark.parametrize(
+    "fault, heard",
+    [
+        (TapOff, {"tone responses", "noise frames"}),
+        (FrameTurned, {"tone frames"}),
+        (AntennaLeaks, {"tone frames"}),
+        (BorderDropped, {"tone frames"}),
+    ],
+)
 @pytest.mark.parametrize("seed", GEOMETRIES)
-def test_a_faulty_kernel_is_caught(formula, seed, fault):
+def test_a_faulty_kernel_is_caught(formula, seed, fault, heard):
     bank, said = formula[seed]
     with pytest.raises(ReportDisagreement, match=r"tone|noise") as caught:
         said.verify(measured(fault(bank, seed), seed))
     lines = {line.what for line in caught.value.verification.lines if not line.agreed}
-    assert lines & {"tone responses", "tone frames", "noise frames"}
+    assert lines >= heard
 
 
 @pytest.mark.parametrize("channels", [1024, 16384])

@@ -169,6 +169,9 @@ def test_refusals():
         SynthesisBank(plan, Prototype(np.ones(4), 4), pair_delay=1)
     with pytest.raises(ValueError, match="multiple of 1/2"):
         SynthesisBank(ChannelPlan(1.0, 6, 3, real=True, offset=0.3), ones, pair_delay=1)
+    other = Prototype(np.ones(6), 6, design={"hop": 2})
+    with pytest.raises(ValueError, match=r"plan of hop 3 .* at hop 2"):
+        SynthesisBank(plan, other, pair_delay=1)
     bank = SynthesisBank(plan, ones, pair_delay=5)
     before = pickle.dumps(bank)
     for frames, error, word in (

@@ -80,8 +80,8 @@ class SynthesisBank:
     ------
     TypeError, ValueError
         A parameter of the wrong type or out of range; a prototype for another number of channels
-        or another hop, or without a pair delay; gains of the wrong shape or not finite; a real plan whose offset
-        is not a multiple of 1/2.
+        or another hop, or without a pair delay; gains of the wrong shape or not finite; a real plan
+        whose offset is not a multiple of 1/2.
 
     Notes
     -----

@@ -13,7 +13,7 @@ __all__ = ["Comparison", "kernel_checks"]
 # products, a DFT of log2 M stages whose error spreads over all channels, and taps rounded once.
 # The mean over frames shares what is systematic, single frames reach further; a pair adds both
 # banks' share.
-_MEAN_EPSILONS, _FRAME_EPSILONS, _PAIR_EPSILONS, _NOISE_EPSILONS = 8.0, 16.0, 24.0, 12.0
+_MEAN_EPSILONS, _FRAME_EPSILONS, _PAIR_EPSILONS, _NOISE_EPSILONS = 8.0, 16.0, 24.0, 24.0
 _DOUBLE = float(np.finfo(float).eps)
 
 

@@ -5,8 +5,8 @@ import numpy as np
 from chanbank.metrics import _pair_run
 from chanbank.metrics._drive import Exact
 from chanbank.metrics._tone_run import run_pair_tones, run_tones
-from chanbank.metrics.bands import UNMIRRORED
-from chanbank.metrics.figures import DEFINITIONS, Figure
+from chanbank.metrics.bands import NULL, UNMIRRORED
+from chanbank.metrics.figures import DEFINITIONS, NULL_DB, Figure
 from chanbank.metrics.report import absent_figure
 
 __all__ = ["measure_bank"]
@@ -112,8 +112,11 @@ def _pair_figures(driver, system, run, edge):
         ripple = float(10 * np.log10(high / low))
     noise = min(1.0, epsilon / max(np.sqrt(low / high), epsilon))
     found = {"distortion_ripple": _figure("distortion_ripple", ripple, 8.7 * noise)}
-    fast, slow = system.delay_extremes()
-    found["distortion_delay_spread"] = _figure("distortion_delay_spread", slow - fast, None)
+    if not ripple <= NULL_DB:
+        found["distortion_delay_spread"] = absent_figure("distortion_delay_spread", NULL, 1)
+    else:
+        fast, slow = system.delay_extremes()
+        found["distortion_delay_spread"] = _figure("distortion_delay_spread", slow - fast, None)
     errors = [float(np.mean(np.abs(tone.pair - 1) ** 2)) for tone in run]
     found["reconstruction_error_peak"] = _decibels(
         "reconstruction_error_peak", max(errors), epsilon, 0.01

@@ -165,29 +165,33 @@ def frame_bounds(driver):
 
     grid = np.arange(8 * count) / (8 * count)
     scanned = np.concatenate([extremes([w]) for w in grid], axis=1)
-    bounds = []
-    for side, best in ((0, scanned[0].argmin()), (1, scanned[1].argmax())):
-        value, sign = float(scanned[side, best]), (1, -1)[side]
-        # Eigenvalues are six times as fast; singular values keep the digits of a small A, which
-        # vanishes linearly in amplitude at a zero: twelve rounds of four close in on it to 1e-9.
-        exact = side == 0 and value < 1e-6 * scanned[1].max()
-        centre, reach = grid[best], 1 / (8 * count)
-        value = np.inf * sign if exact else value
-        for _ in range(12 if exact else 3):
+    # Eigenvalues are six times as fast; singular values keep the digits of a small A, which
+    # vanishes linearly in amplitude at a zero: twelve rounds of four close in on it to 1e-9.
+    exact = scanned[0].min() < 1e-6 * scanned[1].max()
+    low = _refined(lambda f: extremes(f, exact)[0], grid, scanned[0], 12 if exact else 3)
+    high = -_refined(lambda f: -extremes(f)[1], grid, -scanned[1], 3)
+    return low, high
+
+
+def _refined(level, grid, scanned, rounds):
+    """The least of a periodic function, from the best few minima of a scan."""
+    valleys = np.flatnonzero((scanned <= np.roll(scanned, 1)) & (scanned <= np.roll(scanned, -1)))
+    best = np.inf
+    for start in valleys[np.argsort(scanned[valleys])[:6]]:
+        centre, reach = grid[start], grid[1]
+        for _ in range(rounds):
             across = centre + np.linspace(-reach, reach, 9)
-            values = extremes(across, exact)[side]
-            at = int((sign * values).argmin())
-            centre, reach = across[at], reach / 4
-            value = sign * min(sign * value, sign * float(values[at]))
-        bounds.append(float(value))
-    return bounds[0], bounds[1]
+            values = level(across)
+            centre, reach = across[values.argmin()], reach / 4
+            best = min(best, float(values.min()))
+    return best
 
 
 def synthesis_stopband(driver, edge):
-    """Largest abs(G)^2 beyond the edge, by random frames in one channel.
+    """Largest abs(G)^2 beyond the edge, by noise in one channel.
 
-    Periodic frames of N random phases in channel k leave the synthesis bank as lines at
-    f_k + m / (N D) with amplitudes G / D: one period shows G at every frequency.
+    N periodic frames in channel k, with N equal lines of random phase, leave the synthesis bank
+    as lines at f_k + m / (N D) in proportion to G: one period shows G at every frequency.
     """
     name = "synthesis_stopband"
     if edge >= driver.channels / 2:
@@ -199,7 +203,9 @@ def synthesis_stopband(driver, edge):
     column = len(driver.outputs) // 2
     size = scipy.fft.next_fast_len(-(-max(64 * tail, 256 * driver.channels) // hop))
     settle = -(-tail // hop)
-    phases = np.exp(2j * np.pi * driver.rng.random(size))
+    # Equal lines: a weak one would be drowned by the rounding of the others.
+    flat = np.exp(2j * np.pi * driver.rng.random(size))
+    phases = scipy.fft.ifft(flat) * np.sqrt(size)
     frames = np.resize(phases, size + settle)
     if driver.absolute:
         frames = frames * driver.rotation(0, len(frames), np.array([column]))[:, 0].conj()
@@ -214,8 +220,7 @@ def synthesis_stopband(driver, edge):
     real = driver.real and mirror_weights(driver)[column] == 2
     # Real output is (w + conj(w)) / 2 for frames w, so that 1 and -j times j give w alone.
     wave = 0.5 * (spectra[0] - 1j * spectra[1]) if real else spectra[0]
-    drive = np.tile(np.abs(scipy.fft.fft(phases)) ** 2, hop)
-    lines = np.abs(scipy.fft.fft(wave)) ** 2 / drive
+    lines = np.abs(scipy.fft.fft(wave)) ** 2
     centre = driver.plan.normalised_frequencies[column]
     reference = lines[round(centre * len(lines)) % len(lines)]
     reach = edge / driver.channels

@@ -3,6 +3,7 @@
 import numpy as np
 
 from chanbank.metrics._spectrum import Curve, Response, band_nodes, comb, scan_whole
+from chanbank.metrics.figures import RISE
 
 __all__ = ["Shape", "alias_levels", "decibels"]
 
@@ -56,6 +57,8 @@ class Shape:
             return None
         rest = self.power[below[0] :]
         valleys = np.flatnonzero((rest[1:-1] <= rest[:-2]) & (rest[1:-1] < rest[2:]))
+        ahead = np.maximum.accumulate(rest[::-1])[::-1]
+        valleys = valleys[ahead[1 + valleys] > RISE * rest[1 + valleys]]
         if not len(valleys):
             return None
         start = below[0] + 1 + valleys[0]

@@ -13,7 +13,7 @@ __all__ = ["Curve", "Response", "band_nodes", "comb", "complex_comb", "scan_whol
 _BLOCK = 1 << 22
 
 # Points of the scan per lobe of the response (a lobe is M/L spacings wide).
-_DENSITY = 8
+_DENSITY = 16
 
 
 def comb(taps, channels, count, shifts):
@@ -151,7 +151,7 @@ class Curve:
 
 
 def scan_whole(taps, channels):
-    """abs(H)^2 on a uniform grid from 0 to M/2 spacings, eight points or more a lobe."""
+    """abs(H)^2 on a uniform grid from 0 to M/2 spacings, sixteen points or more a lobe."""
     size = scipy.fft.next_fast_len(max(512, _DENSITY * len(taps)), real=True)
     size += size % 2
     spectrum = scipy.fft.rfft(taps, size)

@@ -8,14 +8,14 @@ band-limited noise.
 
 import numpy as np
 import scipy.fft
+from scipy.interpolate import CubicSpline
+
+from chanbank.metrics.figures import RISE
 
 __all__ = ["Band", "Lines", "sweep", "sweep_size"]
 
 # Lines per lobe of the response (1/L wide), and per channel spacing at least.
 _PER_LOBE, _PER_SPACING = 32, 256
-
-# A minimum is one when the power rises again by more than rounding: 0.02 dB.
-_RISE = 1.005
 
 
 def sweep_size(driver):
@@ -194,22 +194,21 @@ class Lines:
             levels = power[side]
             valleys = np.flatnonzero((levels[1:-1] <= levels[:-2]) & (levels[1:-1] < levels[2:]))
             ahead = np.maximum.accumulate(levels[::-1])[::-1]
-            valleys = valleys[ahead[1 + valleys] > _RISE * levels[1 + valleys]]
+            valleys = valleys[ahead[1 + valleys] > RISE * levels[1 + valleys]]
             if not len(valleys):
                 return None
             found.append(float(abs(offset[side[1 + valleys[0]]])))
         return found
 
     def delay_spread(self, row, band):
-        """Spread of the slope of the phase over steps of two lines, the band's ends included."""
-        lines = np.arange(band.first - 1, band.first + len(band.lines) + 1) % self.period
-        values = self.responses[row, lines]
-        turns = np.angle(values[2:] * values[:-2].conj())
-        # The bulk delay turns the phase many times: take the spread around the mean turn.
-        mean = np.angle(np.exp(1j * turns).mean())
-        around = np.angle(np.exp(1j * (turns - mean)))
-        slope = around * self.period / (4 * np.pi)
-        # Slopes sit on band.lines, of which the first and last lie at or outside the ends.
-        slope[0] += band.head * (slope[1] - slope[0])
-        slope[-1] += band.tail * (slope[-2] - slope[-1])
+        """Spread of the slope of the phase, from a spline through the complex responses: a zero
+        near the band turns the phase within a step, but not the response."""
+        lines = np.arange(band.first - 4, band.first + len(band.lines) + 4)
+        values = self.responses[row, lines % self.period]
+        # The bulk delay turns the phase many times a line: take the mean turn out first.
+        mean = np.angle((values[1:] * values[:-1].conj()).sum())
+        place = np.arange(len(lines))
+        spline = CubicSpline(place, values * np.exp(-1j * mean * place))
+        points = np.linspace(4 + band.head, len(lines) - 5 - band.tail, 4 * len(lines))
+        slope = (spline(points, 1) / spline(points)).imag * self.period / (2 * np.pi)
         return float(np.ptp(slope))

@@ -5,9 +5,9 @@ import math
 import numpy as np
 
 from chanbank.metrics._shape import Shape, decibels
-from chanbank.metrics.bands import UNMIRRORED
+from chanbank.metrics.bands import NULL, UNMIRRORED
 from chanbank.metrics.cost import bank_cost, converter_cost, state_bytes
-from chanbank.metrics.figures import DEFINITIONS, Figure
+from chanbank.metrics.figures import DEFINITIONS, NULL_DB, Figure
 from chanbank.metrics.report import absent_figure
 from chanbank.synthesis.condition import noise_gain
 from chanbank.synthesis.frames import frame_bounds
@@ -41,6 +41,8 @@ def pair_figures(plan, prototype, synthesis, system, edge):
             found[name] = absent_figure(name, reason, 1)
         else:
             found[name] = Figure(DEFINITIONS[name], value)
+    if not found["distortion_ripple"].values <= NULL_DB:
+        found["distortion_delay_spread"] = absent_figure("distortion_delay_spread", NULL, 1)
     if plan.hop == 1:
         for name in ("alias_transfer_peak", "alias_transfer_sum", "impulse_spread"):
             found[name] = absent_figure(name, "hop 1: the pair does not vary with time", 1)

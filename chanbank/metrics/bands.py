@@ -6,6 +6,7 @@ from chanbank._checks import OwnCheck, wrong_type, wrong_value
 from chanbank.metrics.figures import DEFINITIONS, Figure
 
 __all__ = [
+    "NULL",
     "OCCUPIED",
     "UNMIRRORED",
     "neighbours",
@@ -18,6 +19,7 @@ __all__ = [
 # Each distinct bandwidth costs one pass over the prototype.
 _MOST_WIDTHS = 64
 
+NULL = "T_0 has a null, where a group delay has no meaning"
 UNMIRRORED = "the channels of a real plan mirror each other only at offsets of k/2"
 
 OCCUPIED = OwnCheck(

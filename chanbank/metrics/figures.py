@@ -4,7 +4,13 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-__all__ = ["DEFINITIONS", "Definition", "Figure"]
+__all__ = ["DEFINITIONS", "NULL_DB", "RISE", "Definition", "Figure"]
+
+# A minimum of a response is one where the power rises again by more than rounding: 0.02 dB.
+RISE = 1.005
+
+# A transfer with a dip deeper than this has a null, and no group delay there.
+NULL_DB = 60.0
 
 
 @dataclass(frozen=True)
@@ -72,7 +78,8 @@ _ALL = [
     ),
     Definition(
         "highest_sidelobe", "highest sidelobe", "dB", "lower", "channel",
-        "largest abs(H)^2 beyond the first minimum outside the -6 dB point, over abs(H(0))^2",
+        "largest abs(H)^2 beyond the first minimum (0.02 dB deep or more) outside the -6 dB point, "
+        "over abs(H(0))^2",
     ),
     Definition(
         "stopband_level", "stopband level", "dB", "lower", "channel",

@@ -158,3 +158,10 @@ def test_prototype_response_is_the_direct_sum():
     # Phases of up to 1250 turns carry 1250 eps each in the direct sum.
     assert np.abs(got - wanted).max() < 1250 * 2 * np.pi * 2.3e-16 * np.abs(taps).sum()
     assert chanbank.Prototype(taps, 16).branches().shape == (16, 63)
+
+
+def test_long_prototypes_keep_their_nulls():
+    # Phases of whole spacings are reduced in integers: a quarter of a million equal taps cancel to
+    # the rounding of their sum, which block-wise products carry as sqrt(512) eps / 2 or so.
+    response = chanbank.boxcar_prototype(1 << 18).response([1, 1000, -77_777, 1 << 17])
+    assert np.abs(response).max() < 3e-15

@@ -266,6 +266,15 @@ def analysis_run(lane, real, step):
 @cache
 def source_digest():
     here = Path(__file__).parent
-    names = ("lanes.py", "move.py", "phase.py", "stage.py", "fold.py", "driver.py", "unfold.py")
+    names = (
+        "compiling.py",
+        "lanes.py",
+        "move.py",
+        "phase.py",
+        "stage.py",
+        "fold.py",
+        "driver.py",
+        "unfold.py",
+    )
     text = b"".join((here / name).read_bytes() for name in names)
     return int(hashlib.sha256(text + bytes([VECTOR_BYTES])).hexdigest()[:12], 16)

@@ -352,12 +352,20 @@ def _response(taps, channels, frequencies):
     table = np.zeros(rows * step)
     table[: len(taps)] = taps
     table = table.reshape(rows, step).T
-    cycles = np.mod(flat / channels, 1.0)
+    # Whole spacings turn by whole M-th parts: reduced in integers, so that only the rest of less
+    # than half a spacing is rounded, whatever the length.
+    whole = np.rint(flat)
+    rest = (flat - whole) / channels
+    whole = np.mod(whole, channels).astype(np.int64)
     result = np.empty(len(flat), np.complex128)
     chunk = max(1, (1 << 22) // (rows + step))
     for start in range(0, len(flat), chunk):
-        turn = cycles[start : start + chunk, None]
-        fine = np.exp(-2j * np.pi * np.mod(turn * np.arange(step), 1.0))
-        coarse = np.exp(-2j * np.pi * np.mod(turn * (np.arange(rows) * step), 1.0))
-        result[start : start + chunk] = np.einsum("fa,fa->f", fine @ table, coarse)
+        part = slice(start, start + chunk)
+        fine, coarse = (
+            np.exp(
+                -2j * np.pi * (whole[part, None] * at % channels / channels + rest[part, None] * at)
+            )
+            for at in (np.arange(step), np.arange(rows) * step)
+        )
+        result[part] = np.einsum("fa,fa->f", fine @ table, coarse)
     return result.reshape(shape)

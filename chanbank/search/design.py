@@ -87,6 +87,7 @@ class Design:
 
     @property
     def name(self):
+        """Method, M, D and P in a few words."""
         plan = self.plan
         return f"{self.method}, M {plan.channels}, D {plan.hop}, P {self.taps_per_branch}"
 

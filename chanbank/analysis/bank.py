@@ -18,6 +18,7 @@ from chanbank._checks import (
 )
 from chanbank._engine import AnalysisSpec, make_analysis_engine
 from chanbank.analysis.arrays import bank_dtype, checked_out, flat_leading
+from chanbank.analysis.base import Bank, same_channels
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 
@@ -32,7 +33,7 @@ _SAMPLES = OwnCheck(
 _OUT = OwnCheck("None or an array that fits the result", ("text", TypeError))
 
 
-class AnalysisBank:
+class AnalysisBank(Bank):
     """Split a signal into the channels of a plan, in one call or as a stream.
 
     With absolute phase, channel k at f_k = (k + offset) / M cycles per sample gives
@@ -115,6 +116,8 @@ class AnalysisBank:
     array([0., 1., 0.])
     """
 
+    _kept = ("_parameters", "_lead", "_finished")
+
     @checked(
         plan=Instance(ChannelPlan),
         prototype=Instance(Prototype),
@@ -145,11 +148,7 @@ class AnalysisBank:
         workers=1,
         full_scale=None,
     ):
-        if plan.channels != prototype.channels:
-            raise ValueError(
-                "plan and prototype must have the same number of channels; got a plan of "
-                f"{plan.channels} and a prototype for {prototype.channels}"
-            )
+        same_channels(plan, prototype)
         self._parameters = {
             "plan": plan,
             "prototype": prototype,
@@ -200,39 +199,9 @@ class AnalysisBank:
         }
 
     @property
-    def plan(self):
-        """The channel plan."""
-        return self._parameters["plan"]
-
-    @property
-    def prototype(self):
-        """The prototype."""
-        return self._parameters["prototype"]
-
-    @property
-    def dtype(self):
-        """NumPy dtype of the frames."""
-        return self._spec.dtype
-
-    @property
-    def phase(self):
-        """ "absolute" or "frame"."""
-        return self._parameters["phase"]
-
-    @property
     def select(self):
         """Indices of the channels returned, a tuple, or None for all."""
         return self._parameters["select"]
-
-    @property
-    def layout(self):
-        """ "frames" or "channels"."""
-        return self._parameters["layout"]
-
-    @property
-    def workers(self):
-        """Number of threads."""
-        return self._parameters["workers"]
 
     @property
     def full_scale(self):
@@ -249,10 +218,6 @@ class AnalysisBank:
         return frequencies if self.select is None else frequencies[list(self.select)]
 
     @property
-    def engine(self):
-        return self._engine.name
-
-    @property
     def next_sample(self):
         return self._engine.position
 
@@ -261,14 +226,10 @@ class AnalysisBank:
         return -(-self._engine.position // self.plan.hop)
 
     def __repr__(self):
-        held = self._parameters
-        shown = [f"{self.plan!r}", f"{self.prototype!r}"]
-        shown += [f"{name}={held[name]!r}" for name in ("dtype", "phase", "layout", "workers")]
-        if self.select is not None:
-            shown.append(f"select=<{len(self.select)} channels>")
+        extras = [] if self.select is None else [f"select=<{len(self.select)} channels>"]
         if self.full_scale is not None:
-            shown.append(f"full_scale={self.full_scale!r}")
-        return f"AnalysisBank({', '.join(shown)}) <{self.engine} engine>"
+            extras.append(f"full_scale={self.full_scale!r}")
+        return self._described(("dtype", "phase", "layout", "workers"), extras)
 
     @checked(samples=_SAMPLES, out=_OUT, call=False)
     def __call__(self, samples, out=None):
@@ -344,7 +305,7 @@ class AnalysisBank:
         """
         self._refuse_finished()
         samples, count, lead = self._checked_samples(samples)
-        self._refuse_other_lead(lead)
+        self._refuse_other_lead("samples", lead)
         out = checked_out(out, self._shape(lead, self._frames_for(count)), self._spec.dtype)
         self._accept_lead(lead)
         self._run(self._engine.push, samples, out)
@@ -514,17 +475,6 @@ class AnalysisBank:
         self._engine.push_zeros(count, flat_leading(out, 2))
         return out
 
-    def _refuse_finished(self):
-        if self._finished:
-            raise RuntimeError("the stream is finished; call reset() to start a new one")
-
-    def _refuse_other_lead(self, lead):
-        if self._lead is not None and lead != self._lead:
-            raise ValueError(
-                "samples must keep the leading axes (antennas) of the first push, "
-                f"{self._lead}; got {lead}. Call reset() to start a stream of another shape"
-            )
-
     def _accept_lead(self, lead):
         if self._lead is None:
             self._lead = lead
@@ -592,20 +542,6 @@ class AnalysisBank:
                 f"samples must not be of higher precision than the bank's {self.dtype.name}; got "
                 f"{name}. Ask for {way}, or pass samples.astype({lower!r})"
             )
-
-    def __getstate__(self):
-        return {
-            "parameters": self._parameters,
-            "lead": self._lead,
-            "finished": self._finished,
-            "engine": self._engine.get_state(),
-        }
-
-    def __setstate__(self, state):
-        self._parameters = state["parameters"]
-        self._build()
-        self._lead, self._finished = state["lead"], state["finished"]
-        self._engine.set_state(state["engine"])
 
 
 def _checked_select(select, count):

@@ -16,6 +16,7 @@ from chanbank._checks import (
 )
 from chanbank._engine import SynthesisSpec, make_synthesis_engine
 from chanbank.analysis.arrays import bank_dtype, checked_out, flat_leading
+from chanbank.analysis.base import Bank, same_channels
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 
@@ -36,7 +37,7 @@ _GAINS = OwnCheck(
 )
 
 
-class SynthesisBank:
+class SynthesisBank(Bank):
     """Put the channels of an analysis bank back together, in one call or as a stream.
 
     The output is the overlap-add
@@ -107,6 +108,8 @@ class SynthesisBank:
     True
     """
 
+    _kept = ("_parameters", "_gains", "_lead", "_finished")
+
     @checked(
         plan=Instance(ChannelPlan),
         prototype=Instance(Prototype),
@@ -129,11 +132,7 @@ class SynthesisBank:
         layout="frames",
         workers=1,
     ):
-        if plan.channels != prototype.channels:
-            raise ValueError(
-                "plan and prototype must have the same number of channels; got a plan of "
-                f"{plan.channels} and a prototype for {prototype.channels}"
-            )
+        same_channels(plan, prototype)
         hop = prototype.design.get("hop", plan.hop)
         if hop != plan.hop:
             raise ValueError(
@@ -194,21 +193,6 @@ class SynthesisBank:
         self._whole = None
 
     @property
-    def plan(self):
-        """The channel plan."""
-        return self._parameters["plan"]
-
-    @property
-    def prototype(self):
-        """The prototype."""
-        return self._parameters["prototype"]
-
-    @property
-    def dtype(self):
-        """NumPy dtype of the frames."""
-        return self._spec.dtype
-
-    @property
     def sample_dtype(self):
         """NumPy dtype of the samples returned."""
         if not self.plan.real:
@@ -216,27 +200,8 @@ class SynthesisBank:
         return np.dtype(np.float32 if self.dtype == np.complex64 else np.float64)
 
     @property
-    def phase(self):
-        """ "absolute" or "frame"."""
-        return self._parameters["phase"]
-
-    @property
-    def layout(self):
-        """ "frames" or "channels"."""
-        return self._parameters["layout"]
-
-    @property
-    def workers(self):
-        """Number of threads."""
-        return self._parameters["workers"]
-
-    @property
     def delay(self):
         return self._parameters["pair_delay"]
-
-    @property
-    def engine(self):
-        return self._engine.name
 
     @property
     def next_frame(self):
@@ -256,13 +221,8 @@ class SynthesisBank:
         self._gains = self._checked_gains(gains)
 
     def __repr__(self):
-        held = self._parameters
-        shown = [f"{self.plan!r}", f"{self.prototype!r}"]
-        names = ("pair_delay", "dtype", "phase", "layout", "workers")
-        shown += [f"{name}={held[name]!r}" for name in names]
-        if self._gains is not None:
-            shown.append(f"gains=<{len(self._gains)} gains>")
-        return f"SynthesisBank({', '.join(shown)}) <{self.engine} engine>"
+        extras = [] if self._gains is None else [f"gains=<{len(self._gains)} gains>"]
+        return self._described(("pair_delay", "dtype", "phase", "layout", "workers"), extras)
 
     @checked(frames=_FRAMES, length=Optional(Integer(0)), out=_OUT)
     def __call__(self, frames, length=None, out=None):
@@ -351,11 +311,7 @@ class SynthesisBank:
         """
         self._refuse_finished()
         frames, count, lead = self._checked_frames(frames)
-        if self._lead is not None and lead != self._lead:
-            raise ValueError(
-                "frames must keep the leading axes (antennas) of the first push, "
-                f"{self._lead}; got {lead}. Call reset() to start a stream of another shape"
-            )
+        self._refuse_other_lead("frames", lead)
         out = checked_out(out, (*lead, count * self.plan.hop), self.sample_dtype)
         if self._lead is None:
             self._lead = lead
@@ -448,10 +404,6 @@ class SynthesisBank:
             shape = shape[::-1]
         return self._run(engine, np.zeros((antennas, *shape), self.dtype))[:, : self._tail]
 
-    def _refuse_finished(self):
-        if self._finished:
-            raise RuntimeError("the stream is finished; call reset() to start a new one")
-
     def _checked_frames(self, frames):
         array = np.asarray(frames)
         if array.dtype.kind not in "fc":
@@ -493,21 +445,6 @@ class SynthesisBank:
         array = array.astype(np.complex128)
         array.flags.writeable = False
         return array
-
-    def __getstate__(self):
-        return {
-            "parameters": self._parameters,
-            "gains": self._gains,
-            "lead": self._lead,
-            "finished": self._finished,
-            "engine": self._engine.get_state(),
-        }
-
-    def __setstate__(self, state):
-        self._parameters, self._gains = state["parameters"], state["gains"]
-        self._build()
-        self._lead, self._finished = state["lead"], state["finished"]
-        self._engine.set_state(state["engine"])
 
 
 class _Aligned:

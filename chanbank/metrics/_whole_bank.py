@@ -14,8 +14,8 @@ from chanbank.synthesis.frames import frame_bounds
 
 __all__ = ["cost_figures", "frame_figures", "pair_figures"]
 
-# Up to here the bank's polyphase matrices are small, and frame bounds take a fraction of a second.
-_MOST_COLUMNS = 96
+# Up to here frame bounds are exact and take a second at most.
+_MOST_COLUMNS = 4096
 
 
 def pair_figures(plan, prototype, synthesis, system, edge):
@@ -55,7 +55,7 @@ def frame_figures(plan, prototype):
         return {name: absent_figure(name, UNMIRRORED, 1) for name in names}
     if plan.hop // math.gcd(plan.channels, plan.hop) > _MOST_COLUMNS:
         reason = (
-            f"hop / gcd(channels, hop) is above {_MOST_COLUMNS}, which takes up to minutes: "
+            f"hop / gcd(channels, hop) is above {_MOST_COLUMNS}, where bounds lose digits: "
             "call frame_bounds(plan, prototype)"
         )
         return {name: absent_figure(name, reason, 1) for name in names}

@@ -96,7 +96,10 @@ class BankReport:
     def __getattr__(self, name):
         figures = self.__dict__.get("figures", {})
         if name not in figures:
-            raise AttributeError(f"BankReport has no attribute or figure {name!r}")
+            raise AttributeError(
+                f"BankReport has no attribute or figure {name!r}; its figures are "
+                + ", ".join(figures)
+            )
         figure = figures[name]
         return figure.public if figure.present else None
 

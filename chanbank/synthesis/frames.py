@@ -17,6 +17,8 @@ from chanbank.prototype.prototype import Prototype
 __all__ = ["FrameBounds", "frame_bounds"]
 
 _DENSE = 96  # columns up to which a polyphase matrix is decomposed as a dense one
+_WIDE = 512  # columns beyond which theta makes no difference in double precision
+_BANDED = 4096  # columns up to which a sparse one is reduced as a band
 _CHUNK = 1 << 21  # complex numbers in one batch of matrices (32 MB)
 _STEPS = 500  # Lanczos steps for larger ones
 _FINALISTS = 6  # extremes of the grid that are refined over theta
@@ -95,8 +97,9 @@ def frame_bounds(plan, prototype):
     -----
     theta is searched on a grid finer than the matrices' degree and the best few grid points are
     refined. Matrices of more than 96 columns (M and D with a small common divisor) are sparse and
-    span more samples than a prototype does, so that theta hardly matters: their extremes come from
-    500 Lanczos steps at theta = 0 and pi and lie inside the true bounds by some 1e-4 of them.
+    span more samples than a prototype does, so that theta hardly matters: five angles up to 512
+    columns leave less than 1e-7 of the bounds, two beyond that nothing. Above 4096 columns the
+    extremes come from 500 Lanczos steps and lie inside the true bounds by some 1e-4 of them.
 
     References
     ----------
@@ -122,7 +125,7 @@ def frame_bounds(plan, prototype):
     matrices = _Polyphase(prototype.taps, plan.channels, plan.hop)
     # For real taps theta and -theta give conjugate matrices.
     if matrices.q > _DENSE:
-        low, high = matrices.extremes(np.array([0.0, np.pi]))
+        low, high = matrices.extremes(np.linspace(0, np.pi, 5 if matrices.q <= _WIDE else 2))
         return FrameBounds(float(low.min()), float(high.max()))
     count = 1 if matrices.degree == 0 else 12 * matrices.degree + 5
     grid = np.linspace(0, np.pi, count)
@@ -220,12 +223,34 @@ class _Polyphase:
         for b in range(self.common):
             mine = slice(-b % self.common, None, self.common)
             for at, theta in enumerate(thetas):
-                weight = self.weight[mine] * np.exp(-1j * theta * self.power[mine])
+                # At 0 and pi the matrices are real, which costs a quarter.
+                real = theta in (0.0, np.pi)
+                turn = np.exp(-1j * theta * self.power[mine])
+                weight = self.weight[mine] * (np.round(turn.real) if real else turn)
                 matrix = scipy.sparse.csr_matrix(
                     (weight, (self.row[mine], self.column[mine])), shape=(self.p, self.q)
                 )
-                low[b, at], high[b, at] = _lanczos(matrix)
+                solve = _banded if self.q <= _BANDED else _lanczos
+                low[b, at], high[b, at] = solve(matrix)
         return low, high
+
+
+def _banded(matrix):
+    """Extreme eigenvalues of A^H A, all digits.
+
+    Samples M apart are neighbouring columns, so A^H A is a band bent to a ring; taken from both
+    ends alternately, the ring is a band of twice the width.
+    """
+    size = matrix.shape[1]
+    order = np.empty(size, int)
+    order[0::2], order[1::2] = np.arange((size + 1) // 2), np.arange(size - 1, (size - 1) // 2, -1)
+    gram = (matrix.conj().T @ matrix).tocsr()[order][:, order].tocoo()
+    below = gram.row - gram.col
+    kept = below >= 0
+    band = np.zeros((below.max() + 1, size), gram.dtype)
+    band[below[kept], gram.col[kept]] = gram.data[kept]
+    values = scipy.linalg.eig_banded(band, lower=True, eigvals_only=True)
+    return max(values[0], 0.0), values[-1]
 
 
 def _lanczos(matrix):

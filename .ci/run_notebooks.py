@@ -1,6 +1,7 @@
 """Execute notebooks from start to end in throw-away folders; any error in a cell fails."""
 
 import argparse
+import os
 import pathlib
 import sys
 import tempfile
@@ -11,6 +12,10 @@ from nbclient import NotebookClient
 
 LIMIT_SECONDS = 120
 LIMIT_BYTES = 1 << 20
+
+
+# A backend chosen outside would keep the pictures out of the pages.
+os.environ.pop("MPLBACKEND", None)
 
 
 def run(path, write):

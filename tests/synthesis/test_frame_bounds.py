@@ -126,10 +126,12 @@ def test_two_taps_to_a_branch_at_critical_sampling():
     assert got.lower == pytest.approx(0.15372, abs=1e-5)
 
 
-def test_sparse_and_dense_ways_agree(monkeypatch):
+@pytest.mark.parametrize("banded", [4096, 4])  # as a band, and by Lanczos steps
+def test_sparse_and_dense_ways_agree(monkeypatch, banded):
     taps = np.hanning(4 * 37 + 2)[1:-1]
     dense = bounds(taps, 37, 30)
     monkeypatch.setattr(module, "_DENSE", 4)
+    monkeypatch.setattr(module, "_BANDED", banded)
     sparse = bounds(taps, 37, 30)
     assert sparse.lower == pytest.approx(dense.lower, rel=1e-6)
     assert sparse.upper == pytest.approx(dense.upper, rel=1e-6)

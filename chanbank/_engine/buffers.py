@@ -23,17 +23,14 @@ class Ring:
         self.memory = aligned_bytes(rows * row_stride)
         lines = self.memory.reshape(rows, row_stride)
         self.rows = lines[:, :row_bytes].view(dtype)
-        # The rows' addresses twice over, so that no index needs to wrap, and once more as where
-        # they belong: for the time of a push a row may be found elsewhere.
-        numbers = np.arange(3 * rows, dtype=np.int64) % rows
+        # The rows' addresses twice over, so that no index needs to wrap.
+        numbers = np.arange(2 * rows, dtype=np.int64) % rows
         self.table = self.memory.ctypes.data + numbers * row_stride
         self.address = self.table.ctypes.data
 
     def copy_from(self, other):
         """Take over another ring's rows."""
         self.memory[...] = other.memory
-        size = len(self.table) // 3
-        self.table[:size] = self.table[size : 2 * size] = self.table[2 * size :]
 
 
 def address_or_zero(array):

@@ -25,7 +25,7 @@ from chanbank._engine.lanes import (
 )
 from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
-from chanbank._engine.stage import NUMBER_BYTES, stage_run
+from chanbank._engine.stage import stage_run
 
 __all__ = ["ANALYSIS", "analysis_run", "execute_plan", "record", "source_digest"]
 
@@ -81,61 +81,39 @@ def _bank_at(typingctx, address):
 
 
 @njit(nogil=True, error_model="numpy")
-def _stage(variant, bank, table, samples, own, begin, end):
+def _stage(variant, bank, table, samples, begin, end):
     """Samples begin .. end - 1 (absolute) of a push into the ring.
 
     `samples` is (code of the dtype, numbers per sample, address, absolute index of the first
-    sample, zero, scale), integers standing for (value - zero) * scale. Rows own[0] .. own[1] - 1
-    need no conversion and are wholly in the caller's array for the time of the push: the table
-    is pointed there, and nothing is copied.
+    sample, zero, scale), integers standing for (value - zero) * scale. Floats that need no
+    conversion are copied all the same: reading memory in one straight line and folding from
+    padded rows costs less than folding the caller's rows where they are, which often lie a power
+    of two apart and then fight for the same few sets of the caches.
     """
     code, given, source, origin, zero, scale = samples
     sample_bytes = bank.held * lane_bytes(variant)
     mixer = (bank.mix_high, bank.mix_low, bank.mix_table)
-    size = bank.ring_rows
-    # The rows' addresses, twice over, and where the ring keeps each row.
-    rows = carray(address_as_pointer(table), (3 * size,), np.int64)
+    rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
     time = begin
     while time < end:
         row = time // bank.channels
         column = time - row * bank.channels
         count = min(bank.channels - column, end - time)
-        place = row % size
-        if own[0] <= row < own[1]:
-            address = source + (row * bank.channels - origin) * sample_bytes
-        else:
-            address = rows[place + 2 * size]
-            stage_run(
-                variant,
-                code,
-                address + column * sample_bytes,
-                source,
-                time - origin,
-                count,
-                given,
-                bank.held,
-                zero,
-                scale,
-                mixer,
-                time,
-            )
-        rows[place] = rows[place + size] = address
+        stage_run(
+            variant,
+            code,
+            rows[row % bank.ring_rows] + column * sample_bytes,
+            source,
+            time - origin,
+            count,
+            given,
+            bank.held,
+            zero,
+            scale,
+            mixer,
+            time,
+        )
         time += count
-
-
-@njit(nogil=True, error_model="numpy")
-def _own_rows(variant, bank, code, given, begin, end):
-    """Which rows may stay in the caller's array: all within the push, but for the last ones.
-
-    Those must outlive the push in the ring. A vector that runs over a row's end still reads
-    within the array.
-    """
-    plain = 0 < code < 5 and NUMBER_BYTES[code] == lane_bytes(variant)
-    if not plain or given != bank.held or bank.mix_table != 0:
-        return 0, 0
-    over = VECTOR_BYTES // (bank.held * lane_bytes(variant))
-    first = -(-begin // bank.channels)
-    return first, min(end // bank.channels - bank.rows, (end - over) // bank.channels)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -232,30 +210,26 @@ def analysis_run(lane, real, step):
     ):
         """Take samples begin .. end - 1, deliver frames first .. last - 1.
 
-        `table` is the ring's (see `_stage`); the operands from `code` on are
-        those of `_stage` and `_deliver`.
+        `table` holds the addresses of the ring's rows (see `Ring`); the operands from `code` on
+        are those of `_stage` and `_deliver`.
         """
         variant = make_variant(lane, real, step)
         bank = _bank_at(bank_address)
         samples = (code, given, source, origin, zero, scale)
         result = (target, frame_stride, column_stride, stream)
-        sample_bytes = given * NUMBER_BYTES[code]
-        own = _own_rows(variant, bank, code, given, begin, end)
         time, frame = begin, first
         while frame < last:
             count = min(bank.block, last - frame)
             newest = (frame + count - 1) * bank.hop + 1
-            _stage(variant, bank, table, samples, own, time, newest)
+            _stage(variant, bank, table, samples, time, newest)
             time = newest
-            ahead = source + (time - origin) * sample_bytes
-            soon = ahead + min(bank.block * bank.hop, end - time) * sample_bytes
-            fold_block(variant, bank, table, frame, count, ahead, soon)
+            fold_block(variant, bank, table, frame, count)
             for start in range(0, count, bank.gather):
                 size = min(bank.gather, count - start)
                 _transform(variant, bank, frame, start, size)
                 _deliver(variant, bank, result, frame + start - first, size)
             frame += count
-        _stage(variant, bank, table, samples, own, time, end)
+        _stage(variant, bank, table, samples, time, end)
         if stream != 0:
             fence()
         return sources

@@ -17,7 +17,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes
 
-__all__ = ["LINE", "TILE", "fold_block", "fold_rows"]
+__all__ = ["TILE", "fold_block", "fold_rows"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
@@ -26,11 +26,9 @@ _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 # in the first-level cache.
 TILE = 1024 // VECTOR_BYTES
 
-LINE = 64  # bytes
-
 
 @intrinsic(prefer_literal=True)
-def _fold_group(typingctx, variant, together, rows, taps, out, vectors, fetch):
+def _fold_group(typingctx, variant, together, rows, taps, out, vectors):
     """out[f] = sum over p < count of row[p + f*step] * taps[p], f < together, oldest row first.
 
     Operands as in `fold_rows`, but that `rows` begins with the place in the table.
@@ -39,19 +37,14 @@ def _fold_group(typingctx, variant, together, rows, taps, out, vectors, fetch):
 
     def codegen(context, builder, signature, args):
         lanes = Lanes(builder, variant.lane)
-        _, _, rows, taps, out, vectors, fetch = args
+        _, _, rows, taps, out, vectors = args
         entry, column, step = lanes.parts(rows)
         tap, tap_stride, count = lanes.parts(taps)
         place, stride = lanes.parts(out)
-        soon, apart = lanes.parts(fetch)
         sums = [cgutils.alloca_once(builder, lanes.full) for _ in range(frames)]
         with cgutils.for_range(builder, vectors) as loop:
             along = lanes.times(loop.index, VECTOR_BYTES)
             tap_along = along if variant.real else lanes.times(loop.index, VECTOR_BYTES // 2)
-            with builder.if_then(builder.icmp_unsigned("!=", soon, lanes.index(0))):
-                line = lanes.add(soon, lanes.times(loop.index, LINE))
-                for frame in range(frames):
-                    lanes.prefetch(lanes.add(line, lanes.times(apart, frame)))
             for total in sums:
                 builder.store(lanes.zero(), total)
             here = lanes.add(tap, tap_along), tap_stride, lanes.add(column, along), step
@@ -71,7 +64,7 @@ def _fold_group(typingctx, variant, together, rows, taps, out, vectors, fetch):
                 lanes.store(builder.load(total), lanes.add(address, along))
         return context.get_dummy_value()
 
-    return types.void(variant, together, rows, taps, out, vectors, fetch), codegen
+    return types.void(variant, together, rows, taps, out, vectors), codegen
 
 
 def _add_chunk(lanes, variant, size, sums, entry, first, here):
@@ -114,49 +107,41 @@ def _add_chunk(lanes, variant, size, sums, entry, first, here):
 
 
 @njit(nogil=True, error_model="numpy")
-def fold_rows(variant, rows, taps, out, frames, vectors, fetch):
+def fold_rows(variant, rows, taps, out, frames, vectors):
     """Fold `vectors` vectors of columns for `frames` frames that lie `step` rows apart.
 
     All operands are addresses and bytes: `rows` is (table of the rows' addresses, the first
     frame's oldest row, the first column, step), `taps` (its oldest tap, from row to row, rows),
-    `out` (the first frame's result, from frame to frame). For every vector and frame one cache
-    line is fetched ahead: `fetch` is (the first, from frame to frame), 0 to fetch nothing.
+    `out` (the first frame's result, from frame to frame).
     """
     table, row, column, step = rows
     place, stride = out
-    soon, apart = fetch
     frame = 0
     while frame < frames:
         entry = (table + 8 * (row + frame * step), column, step)
         here = (place + frame * stride, stride)
-        ahead = (soon + frame * apart if soon != 0 else 0, apart)
         left = frames - frame
         if left >= 8:
-            _fold_group(variant, 8, entry, taps, here, vectors, ahead)
+            _fold_group(variant, 8, entry, taps, here, vectors)
             frame += 8
         elif left >= 4:
-            _fold_group(variant, 4, entry, taps, here, vectors, ahead)
+            _fold_group(variant, 4, entry, taps, here, vectors)
             frame += 4
         elif left >= 2:
-            _fold_group(variant, 2, entry, taps, here, vectors, ahead)
+            _fold_group(variant, 2, entry, taps, here, vectors)
             frame += 2
         else:
-            _fold_group(variant, 1, entry, taps, here, vectors, ahead)
+            _fold_group(variant, 1, entry, taps, here, vectors)
             frame += 1
 
 
 @njit(nogil=True, error_model="numpy")
-def fold_block(variant, bank, table, first, count, ahead, ahead_end):
-    """Fold frames first .. first + count - 1, those that are whole rows apart together.
-
-    While it computes it fetches the samples of the next block, from `ahead` to `ahead_end`, so
-    that they need not be waited for.
-    """
+def fold_block(variant, bank, table, first, count):
+    """Fold frames first .. first + count - 1, those that are whole rows apart together."""
     sample_bytes = bank.held * lane_bytes(variant)
     tap_bytes = lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
     tile = TILE * per_vector
-    nothing = (np.int64(0), np.int64(0))
     for start in range(0, bank.channels, tile):
         stop = min(start + tile, bank.channels)
         for member in range(min(bank.cycle, count)):
@@ -190,10 +175,6 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                     continue
                 oldest = (row - bank.rows + (1 if part == 0 else 0)) % bank.ring_rows
                 vectors = -(-(end - column) // per_vector)
-                fetch = nothing
-                if ahead < ahead_end:
-                    fetch = (ahead, vectors * LINE)
-                    ahead += frames * vectors * LINE
                 offset = column * sample_bytes
                 fold_rows(
                     variant,
@@ -202,5 +183,4 @@ def fold_block(variant, bank, table, first, count, ahead, ahead_end):
                     (place + offset, stride),
                     frames,
                     vectors,
-                    fetch,
                 )

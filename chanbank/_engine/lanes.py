@@ -184,15 +184,6 @@ class Lanes:
             one = self.builder.module.add_metadata([ir.Constant(_LANE_INDEX, 1)])
             done.set_metadata("nontemporal", one)
 
-    def prefetch(self, address):
-        """Ask for a cache line, into the second-level cache."""
-        name = "llvm.prefetch.p0"
-        kind = ir.FunctionType(ir.VoidType(), [cgutils.voidptr_t, *[_LANE_INDEX] * 3])
-        function = cgutils.get_or_insert_function(self.builder.module, kind, name)
-        read, level, data = (ir.Constant(_LANE_INDEX, number) for number in (0, 2, 1))
-        pointer = self.builder.inttoptr(address, cgutils.voidptr_t)
-        self.builder.call(function, [pointer, read, level, data])
-
     def fma(self, left, right, addend):
         return self.builder.call(self._fma, [left, right, addend])
 

@@ -18,7 +18,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.compiling import compiled
 from chanbank._engine.driver import execute_plan, record, source_digest
-from chanbank._engine.fold import LINE, TILE, fold_rows
+from chanbank._engine.fold import TILE, fold_rows
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
@@ -142,7 +142,7 @@ def _transform(variant, bank, table, first, count):
 
 
 @njit(nogil=True, error_model="numpy")
-def _unfold(variant, bank, table, first, count, ahead, ahead_end):
+def _unfold(variant, bank, table, first, count):
     """Samples of hops first .. first + count - 1, those whose columns agree together.
 
     A hop's columns begin at (mD - delay) mod M and may wrap to 0 once: two parts. The first may
@@ -168,10 +168,6 @@ def _unfold(variant, bank, table, first, count, ahead, ahead_end):
                     continue
                 shift = column if begin < split else column - bank.channels
                 vectors = -(-(end - begin) // per_vector)
-                fetch = (np.int64(0), np.int64(0))
-                if ahead < ahead_end:
-                    fetch = (ahead, vectors * LINE)
-                    ahead += hops * vectors * LINE
                 fold_rows(
                     variant,
                     (table, oldest, (begin + shift) * sample_bytes, bank.cycle),
@@ -179,7 +175,6 @@ def _unfold(variant, bank, table, first, count, ahead, ahead_end):
                     (out + begin * sample_bytes, stride),
                     hops,
                     vectors,
-                    fetch,
                 )
                 begin = end
 
@@ -240,12 +235,7 @@ def synthesis_run(lane, real, step):
                 _transform(variant, bank, table, frame + start, part)
             skip = max(0, first - frame)  # frames that only fill the ring
             if skip < count:
-                ahead = 0
-                soon = 0
-                if bank.channel_major == 0:
-                    ahead = source + (frame + count - begin) * stride
-                    soon = ahead + min(bank.block, last - frame - count) * stride
-                _unfold(variant, bank, table, frame + skip, count - skip, ahead, soon)
+                _unfold(variant, bank, table, frame + skip, count - skip)
                 here = target + (frame + skip - first) * hop_bytes
                 _deliver(variant, bank, here, frame + skip, count - skip, stream != 0)
             frame += count

@@ -7,13 +7,17 @@ import numpy as np
 from chanbank._engine.lanes import VECTOR_BYTES
 
 __all__ = [
+    "LINE",
     "Ring",
     "address_or_zero",
     "aligned_bytes",
     "data_address",
     "odd_lines",
+    "split_factors",
     "turn_words",
 ]
+
+LINE = 64  # bytes
 
 
 class Ring:
@@ -48,16 +52,25 @@ def odd_lines(size):
 
     Rows that lie a power of two apart would all fall into the same few sets of the cache.
     """
-    lines = -(-(size + VECTOR_BYTES) // 64)
-    return 64 * (lines | 1)
+    lines = -(-(size + VECTOR_BYTES) // LINE)
+    return LINE * (lines | 1)
 
 
 def aligned_bytes(size):
     """A zeroed buffer of bytes on a cache line."""
-    line = 64
-    buffer = np.zeros(size + line, np.uint8)
-    start = -buffer.ctypes.data % line
+    buffer = np.zeros(size + LINE, np.uint8)
+    start = -buffer.ctypes.data % LINE
     return buffer[start : start + size]
+
+
+def split_factors(points, radix, stride, dtype, sign):
+    """exp(sign 2j pi column piece / points) of a split DFT, in rows for pieces 1 .. radix - 1."""
+    memory = aligned_bytes((radix - 1) * stride)
+    table = memory.view(dtype).reshape(radix - 1, -1)
+    columns = np.arange(points // radix)
+    for piece, row in enumerate(table, 1):
+        row[: len(columns)] = np.exp(sign * 2j * np.pi * (columns * piece % points) / points)
+    return memory
 
 
 def _reader():

@@ -22,6 +22,7 @@ from chanbank._engine.lanes import (
     fence,
     lane_bytes,
     make_variant,
+    pieces_of,
 )
 from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
@@ -39,12 +40,13 @@ def record(text, **special):
 #   cycle: frames after which positions are whole rows apart; step: how many rows then
 #   block, gather, slot: frames folded, delivered and transformed at a time
 #   held: numbers per sample in the ring
-#   turned: rows in frame phase (0: none needed); columns: the chosen DFT points (0: all)
+#   turned: rows in frame phase (0: none needed); columns: the bytes from the start of a frame's
+#   bins to each chosen DFT point (0: all); pieces, factors: of DFTs that are split
 #   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 ANALYSIS = record(
     "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
     " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
-    " execute plan mix_table mix_high mix_low hop_high hop_low",
+    " piece_stride factors factor_stride execute plan mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,
     hop_high=np.uint64,
@@ -160,16 +162,31 @@ def _deliver(variant, bank, result, index, count):
                 bank.column_count,
             )
     elif bank.channel_major != 0:
-        transpose_frames(
-            variant,
-            target,
-            column_stride,
-            bank.bins,
-            bank.bins_stride,
-            count,
-            bank.column_count,
-            stream != 0,
-        )
+        pieces = pieces_of(variant)
+        for piece in range(pieces):
+            transpose_frames(
+                variant,
+                target + piece * column_stride,
+                column_stride * pieces,
+                bank.bins + piece * bank.piece_stride,
+                bank.bins_stride,
+                count,
+                bank.column_count // pieces,
+                stream != 0,
+            )
+    elif pieces_of(variant) > 1:
+        pieces = pieces_of(variant)
+        for frame in range(count):
+            transpose_frames(
+                variant,
+                target + frame * frame_stride,
+                pieces * column_stride,
+                bank.bins + frame * bank.bins_stride,
+                bank.piece_stride,
+                pieces,
+                bank.column_count // pieces,
+                stream != 0,
+            )
     else:
         size = bank.column_count * 2 * lane_bytes(variant)
         for frame in range(count):
@@ -178,8 +195,10 @@ def _deliver(variant, bank, result, index, count):
 
 
 @cache
-def analysis_run(lane, real, step):
+def analysis_run(lane, real, step, radix):
     """The compiled push for floats of `lane` bytes, real or complex samples, known row step.
+
+    `radix` is the number of pieces of a split DFT, 1 where it is whole.
 
     It takes addresses and numbers only, so that one signature serves every array, and the
     dispatcher's work is small against a small push. The digest of the kernels' sources is part of
@@ -213,7 +232,7 @@ def analysis_run(lane, real, step):
         `table` holds the addresses of the ring's rows (see `Ring`); the operands from `code` on
         are those of `_stage` and `_deliver`.
         """
-        variant = make_variant(lane, real, step)
+        variant = make_variant(lane, real, step, radix)
         bank = _bank_at(bank_address)
         samples = (code, given, source, origin, zero, scale)
         result = (target, frame_stride, column_stride, stream)
@@ -246,6 +265,7 @@ def source_digest():
         "move.py",
         "phase.py",
         "stage.py",
+        "radix.py",
         "fold.py",
         "driver.py",
         "unfold.py",

@@ -15,7 +15,8 @@ from numba import njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
-from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes
+from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes, pieces_of
+from chanbank._engine.radix import split_pieces
 
 __all__ = ["TILE", "fold_block", "fold_rows"]
 
@@ -24,7 +25,7 @@ _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
 # Columns (in vectors) folded for all frames before going on: the rows' pieces and their taps stay
 # in the first-level cache.
-TILE = 1024 // VECTOR_BYTES
+TILE = 2048 // VECTOR_BYTES
 
 
 @intrinsic(prefer_literal=True)
@@ -137,50 +138,79 @@ def fold_rows(variant, rows, taps, out, frames, vectors):
 
 @njit(nogil=True, error_model="numpy")
 def fold_block(variant, bank, table, first, count):
-    """Fold frames first .. first + count - 1, those that are whole rows apart together."""
+    """Fold frames first .. first + count - 1, those that are whole rows apart together.
+
+    Where long DFTs are split, a tile goes through its columns of all pieces, and then takes the
+    DFTs' first step.
+    """
+    sample_bytes = bank.held * lane_bytes(variant)
+    per_vector = VECTOR_BYTES // sample_bytes
+    tile = TILE * per_vector
+    pieces = pieces_of(variant)
+    length = bank.channels // pieces
+    for start in range(0, length, tile):
+        stop = min(start + tile, length)
+        for piece in range(pieces):
+            here = piece * length
+            place = bank.folded + piece * (bank.piece_stride - length * sample_bytes)
+            _fold_tile(variant, bank, table, first, count, here + start, here + stop, place)
+        if pieces > 1:
+            offset = start * sample_bytes
+            vectors = -(-(stop - start) // per_vector)
+            for frame in range(count):
+                split_pieces(
+                    variant,
+                    bank.folded + frame * bank.folded_stride + offset,
+                    bank.piece_stride,
+                    bank.factors + offset,
+                    bank.factor_stride,
+                    vectors,
+                )
+
+
+@njit(nogil=True, error_model="numpy")
+def _fold_tile(variant, bank, table, first, count, start, stop, folded):
+    """Columns start .. stop - 1 of `count` frames, to where a row from `folded` on holds them."""
     sample_bytes = bank.held * lane_bytes(variant)
     tap_bytes = lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = TILE * per_vector
-    for start in range(0, bank.channels, tile):
-        stop = min(start + tile, bank.channels)
-        for member in range(min(bank.cycle, count)):
-            frames = (count - member + bank.cycle - 1) // bank.cycle
-            newest = (first + member) * bank.hop
-            row = newest // bank.channels
-            split = newest - row * bank.channels + 1
-            place = bank.folded + member * bank.folded_stride
-            stride = bank.cycle * bank.folded_stride
-            # Columns before the split, then those behind it, which belong to one row earlier. The
-            # last vector of the first part may run over the split; the second part starts with a
-            # vector at the split itself and goes on aligned. Overlapping columns are computed
-            # twice, to the same bits.
-            if split < stop:
-                aligned = -(-split // per_vector) * per_vector
-            else:
-                aligned = stop
-            for part in range(3):
-                if part == 0:
-                    column, end = start, min(split, stop)
-                    taps = bank.channels - split + column
-                elif part == 1:
-                    column, end = split, min(split + 1, aligned)
-                    if split < start:
-                        continue
-                    taps = np.int64(0)
-                else:
-                    column, end = max(start, aligned), stop
-                    taps = column - split
-                if column >= end:
+    for member in range(min(bank.cycle, count)):
+        frames = (count - member + bank.cycle - 1) // bank.cycle
+        newest = (first + member) * bank.hop
+        row = newest // bank.channels
+        split = newest - row * bank.channels + 1
+        place = folded + member * bank.folded_stride
+        stride = bank.cycle * bank.folded_stride
+        # Columns before the split, then those behind it, which belong to one row earlier. The
+        # last vector of the first part may run over the split; the second part starts with a
+        # vector at the split itself and goes on aligned. Overlapping columns are computed
+        # twice, to the same bits.
+        if split < stop:
+            aligned = -(-split // per_vector) * per_vector
+        else:
+            aligned = stop
+        for part in range(3):
+            if part == 0:
+                column, end = start, min(split, stop)
+                taps = bank.channels - split + column
+            elif part == 1:
+                column, end = split, min(split + 1, aligned)
+                if split < start:
                     continue
-                oldest = (row - bank.rows + (1 if part == 0 else 0)) % bank.ring_rows
-                vectors = -(-(end - column) // per_vector)
-                offset = column * sample_bytes
-                fold_rows(
-                    variant,
-                    (table, oldest, offset, bank.step),
-                    (bank.taps + taps * tap_bytes, bank.tap_stride, bank.rows),
-                    (place + offset, stride),
-                    frames,
-                    vectors,
-                )
+                taps = np.int64(0)
+            else:
+                column, end = max(start, aligned), stop
+                taps = column - split
+            if column >= end:
+                continue
+            oldest = (row - bank.rows + (1 if part == 0 else 0)) % bank.ring_rows
+            vectors = -(-(end - column) // per_vector)
+            offset = column * sample_bytes
+            fold_rows(
+                variant,
+                (table, oldest, offset, bank.step),
+                (bank.taps + taps * tap_bytes, bank.tap_stride, bank.rows),
+                (place + offset, stride),
+                frames,
+                vectors,
+            )

@@ -27,6 +27,7 @@ __all__ = [
     "lane_bytes",
     "lane_type",
     "make_variant",
+    "pieces_of",
 ]
 
 INDEX = ir.IntType(64)
@@ -53,26 +54,28 @@ class Variant(types.Opaque):
 
     `lane` is the bytes of one float (4 or 8); `real` says that samples are single floats, not I/Q
     pairs; `step` is the distance in rows between frames that are folded together (0: not known to
-    the compiler, so that rows are not shared between frames).
+    the compiler, so that rows are not shared between frames); `radix` is the number of pieces that
+    a long DFT is split into (1: not split).
     """
 
-    def __init__(self, lane, real, step):
-        self.lane, self.real, self.step = lane, real, step
-        super().__init__(f"Variant(lane={lane}, real={real}, step={step})")
+    def __init__(self, lane, real, step, radix):
+        self.lane, self.real, self.step, self.radix = lane, real, step, radix
+        super().__init__(f"Variant(lane={lane}, real={real}, step={step}, radix={radix})")
 
 
 register_model(Variant)(models.OpaqueModel)
 
 
 @intrinsic(prefer_literal=True)
-def make_variant(typingctx, lane, real, step):
-    """The (empty) value of a Variant, from three integers known to the compiler."""
-    variant = Variant(lane.literal_value, bool(real.literal_value), step.literal_value)
+def make_variant(typingctx, lane, real, step, radix):
+    """The (empty) value of a Variant, from integers known to the compiler."""
+    lane_value, real_value = lane.literal_value, bool(real.literal_value)
+    variant = Variant(lane_value, real_value, step.literal_value, radix.literal_value)
 
     def codegen(context, builder, signature, args):
         return context.get_dummy_value()
 
-    return variant(lane, real, step), codegen
+    return variant(lane, real, step, radix), codegen
 
 
 @intrinsic
@@ -101,6 +104,16 @@ def lane_bytes(typingctx, variant):
 
     def codegen(context, builder, signature, args):
         return context.get_constant(types.int64, variant.lane)
+
+    return types.int64(variant), codegen
+
+
+@intrinsic
+def pieces_of(typingctx, variant):
+    """How many pieces a variant's DFTs are split into; a constant to the compiler."""
+
+    def codegen(context, builder, signature, args):
+        return context.get_constant(types.int64, variant.radix)
 
     return types.int64(variant), codegen
 

@@ -57,11 +57,14 @@ def copy_bytes(target, source, size, stream):
 
 @njit(nogil=True, error_model="numpy")
 def copy_columns(variant, target, step, source, columns, count):
-    """The chosen DFT points of one frame, `step` bytes apart in the result."""
+    """The chosen DFT points of one frame, `step` bytes apart in the result.
+
+    `columns` is the address of `count` words: each point's bytes from `source` on.
+    """
     chosen = carray(address_as_pointer(columns), (count,), np.int64)
     size = 2 * lane_bytes(variant)
     for i in range(count):
-        _copy_whole(8, False, target + i * step, source + chosen[i] * size, size // 8)
+        _copy_whole(8, False, target + i * step, source + chosen[i], size // 8)
 
 
 @intrinsic(prefer_literal=True)

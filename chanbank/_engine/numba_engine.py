@@ -5,18 +5,26 @@ import math
 import numpy as np
 
 from chanbank._engine.buffers import (
+    LINE,
     Ring,
     address_or_zero,
     aligned_bytes,
     data_address,
     odd_lines,
+    split_factors,
     turn_words,
 )
 from chanbank._engine.driver import ANALYSIS, analysis_run
 from chanbank._engine.fftw import make_plan
 from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
-from chanbank._engine.sizes import STREAM_BYTES, WORKER_SAMPLES, block_frames, slot_frames
+from chanbank._engine.sizes import (
+    STREAM_BYTES,
+    WORKER_SAMPLES,
+    block_frames,
+    slot_frames,
+    split_radix,
+)
 from chanbank._engine.stage import FORMATS, ZEROS
 from chanbank._engine.threads import Crew
 
@@ -30,7 +38,7 @@ class NumbaAnalysisEngine:
         self.spec = spec
         self.layout = layout = _Layout(spec)
         step = layout.step if layout.step <= 3 else 0
-        self.run = analysis_run(layout.lane, not layout.paired, step)
+        self.run = analysis_run(layout.lane, not layout.paired, step, layout.radix)
         self.forms = _forms(spec.real)
         self.alone = spec.workers < 2
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
@@ -180,23 +188,36 @@ class _Layout:
         self.cycle, self.step = channels // shared, hop // shared
         self.row_bytes = channels * self.held * self.lane
         self.row_stride = odd_lines(self.row_bytes)
+        self.turned = not spec.rotate and (hop != channels or spec.turn != 0)
+        split = self.paired and not self.turned
+        self.radix = split_radix(channels, self.row_bytes) if split else 1
         bins = channels if self.paired else channels // 2 + 1
-        self.bins_stride = odd_lines(bins * 2 * self.lane)
+        self.piece_stride = odd_lines(bins // self.radix * 2 * self.lane)
+        self.folded_stride, self.bins_stride = self.row_stride, self.piece_stride
+        if self.radix > 1:
+            self.folded_stride = self.bins_stride = self.radix * self.piece_stride + LINE
         self.slot = slot_frames(channels)
         frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
+        # Of a split DFT the plan makes all pieces of one frame, which are rows to it.
         self.plan = make_plan(
-            channels,
-            self.slot,
+            channels // self.radix,
+            self.slot * self.radix,
             spec.dtype,
             "forward" if self.paired else "real",
-            self.row_stride,
-            self.bins_stride,
+            self.folded_stride if self.radix == 1 else self.piece_stride,
+            self.piece_stride,
         )
+        self.factors = None
+        if self.radix > 1:
+            self.factors = split_factors(channels, self.radix, self.piece_stride, spec.dtype, -1)
         self.taps, self.tap_stride = _tap_rows(spec.taps, self.rows, channels, self.lane)
-        self.columns = None if spec.columns is None else np.array(spec.columns, np.int64)
+        self.columns = None
+        if spec.columns is not None:
+            outer, inner = np.divmod(np.array(spec.columns, np.int64), self.radix)
+            self.columns = inner * self.piece_stride + outer * 2 * self.lane
         self.mixer = None
         if spec.turn:
             turn = spec.turn
@@ -213,15 +234,12 @@ class _Worker:
     def __init__(self, layout):
         spec = layout.spec
         self.folded = aligned_bytes(
-            -(-layout.block // layout.slot) * layout.slot * layout.row_stride
+            -(-layout.block // layout.slot) * layout.slot * layout.folded_stride
         )
         self.bins = aligned_bytes(
             -(-layout.gather // layout.slot) * layout.slot * layout.bins_stride
         )
-        turned = (not spec.rotate and spec.hop != spec.channels) or layout.mixer is not None
-        self.turned = (
-            aligned_bytes(layout.slot * layout.row_stride) if turned and not spec.rotate else None
-        )
+        self.turned = aligned_bytes(layout.slot * layout.folded_stride) if layout.turned else None
         self.records = np.zeros(1, ANALYSIS)
         self.address = self.records.ctypes.data
         self.record = record = self.records[0]
@@ -243,10 +261,13 @@ class _Worker:
             "taps": address_or_zero(layout.taps),
             "tap_stride": layout.tap_stride,
             "folded": address_or_zero(self.folded),
-            "folded_stride": layout.row_stride,
+            "folded_stride": layout.folded_stride,
             "turned": address_or_zero(self.turned),
             "bins": address_or_zero(self.bins),
             "bins_stride": layout.bins_stride,
+            "piece_stride": layout.piece_stride,
+            "factors": address_or_zero(layout.factors),
+            "factor_stride": layout.piece_stride,
             "execute": layout.plan.execute,
             "plan": layout.plan.address,
             "mix_table": address_or_zero(layout.mixer),

@@ -5,17 +5,25 @@ import math
 import numpy as np
 
 from chanbank._engine.buffers import (
+    LINE,
     Ring,
     address_or_zero,
     aligned_bytes,
     data_address,
     odd_lines,
+    split_factors,
     turn_words,
 )
 from chanbank._engine.fftw import make_plan
 from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
-from chanbank._engine.sizes import STREAM_BYTES, WORKER_SAMPLES, block_frames, slot_frames
+from chanbank._engine.sizes import (
+    STREAM_BYTES,
+    WORKER_SAMPLES,
+    block_frames,
+    slot_frames,
+    split_radix,
+)
 from chanbank._engine.threads import Crew
 from chanbank._engine.unfold import SYNTHESIS, synthesis_run
 
@@ -29,7 +37,7 @@ class NumbaSynthesisEngine:
         self.spec = spec
         self.layout = layout = _Layout(spec)
         step = layout.cycle if layout.cycle <= 3 else 0
-        self.run = synthesis_run(layout.lane, layout.half, step)
+        self.run = synthesis_run(layout.lane, layout.half, step, layout.radix)
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
         self.weights = (None, None)
         self.reset(0, 1)
@@ -135,8 +143,8 @@ class NumbaSynthesisEngine:
             for part in (gains, spec.column_weights):
                 if part is not None:
                     factor = factor * part
-            whole = np.zeros(self.layout.bins, spec.dtype)
-            whole[slice(None) if spec.columns is None else spec.columns] = factor
+            whole = np.zeros(self.layout.given_stride // spec.dtype.itemsize, spec.dtype)
+            whole[self.layout.places // spec.dtype.itemsize] = factor
             factor = whole
         self.weights = (gains, factor)
         for worker in self.crew.members:
@@ -159,7 +167,13 @@ class _Layout:
         self.ring_dtype = np.dtype(float_type if self.half else spec.dtype)
         self.row_bytes = channels * self.held * self.lane
         self.row_stride = odd_lines(self.row_bytes)
-        self.given_stride = odd_lines(self.bins * 2 * self.lane)
+        self.radix = 1
+        if spec.rotate and not self.half:
+            self.radix = split_radix(channels, self.row_bytes)
+        self.piece_stride = odd_lines(self.bins // self.radix * 2 * self.lane)
+        self.given_stride = self.piece_stride
+        if self.radix > 1:
+            self.given_stride = self.radix * self.piece_stride + LINE
         self.summed_stride = odd_lines(hop * self.held * self.lane)
         self.slot = slot_frames(channels)
         frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
@@ -167,15 +181,21 @@ class _Layout:
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.reach + self.block + self.slot
         self.plan = make_plan(
-            channels,
-            self.slot,
+            channels // self.radix,
+            self.slot * self.radix,
             spec.dtype,
             "real-inverse" if self.half else "inverse",
-            self.given_stride,
-            self.row_stride,
+            self.piece_stride,
+            self.row_stride if self.radix == 1 else self.piece_stride,
         )
+        self.factors = None
+        if self.radix > 1:
+            self.factors = split_factors(channels, self.radix, self.piece_stride, spec.dtype, 1)
         self.taps, self.tap_stride = _tap_rows(spec.taps, self.reach, hop, self.lane)
-        self.columns = None if spec.columns is None else np.array(spec.columns, np.int64)
+        # Where the frames' columns lie in a given row.
+        columns = np.arange(self.bins) if spec.columns is None else np.array(spec.columns)
+        outer, inner = np.divmod(columns.astype(np.int64), self.radix)
+        self.places = inner * self.piece_stride + outer * 2 * self.lane
         self.mixer = None
         if spec.turn:
             back = -spec.turn
@@ -193,7 +213,7 @@ class _Worker:
         spec = layout.spec
         gather = -(-layout.gather // layout.slot) * layout.slot
         self.given = aligned_bytes(gather * layout.given_stride)
-        self.made = aligned_bytes(layout.slot * layout.row_stride)
+        self.made = aligned_bytes(layout.slot * max(layout.row_stride, layout.given_stride))
         self.summed = aligned_bytes(layout.block * layout.summed_stride)
         self.records = np.zeros(1, SYNTHESIS)
         self.address = self.records.ctypes.data
@@ -208,13 +228,12 @@ class _Worker:
             "gather": layout.gather,
             "slot": layout.slot,
             "held": layout.held,
-            "bins": layout.bins,
             "rotate": spec.rotate,
             "channel_major": spec.channel_major,
             "real_part": spec.real and not layout.half,
             "delay": spec.delay,
             "column_count": spec.column_count,
-            "columns": address_or_zero(layout.columns),
+            "columns": 0 if spec.columns is None else layout.places.ctypes.data,
             "taps": address_or_zero(layout.taps),
             "tap_stride": layout.tap_stride,
             "given": address_or_zero(self.given),
@@ -224,6 +243,9 @@ class _Worker:
             "row_stride": layout.row_stride,
             "summed": address_or_zero(self.summed),
             "summed_stride": layout.summed_stride,
+            "piece_stride": layout.piece_stride,
+            "factors": address_or_zero(layout.factors),
+            "factor_stride": layout.piece_stride,
             "execute": layout.plan.execute,
             "plan": layout.plan.address,
             "mix_table": address_or_zero(layout.mixer),

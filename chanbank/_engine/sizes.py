@@ -1,6 +1,6 @@
 """How much to do at a time: blocks that fit the caches, slots of the DFT plans, workers' shares."""
 
-__all__ = ["STREAM_BYTES", "WORKER_SAMPLES", "block_frames", "slot_frames"]
+__all__ = ["STREAM_BYTES", "WORKER_SAMPLES", "block_frames", "slot_frames", "split_radix"]
 
 # Samples per execution of the DFT plan, where frames are short: the stores of one slot drain while
 # the next is computed, and a small push completes whole slots.
@@ -10,6 +10,9 @@ _SLOT_SAMPLES = 1 << 10
 # they are read.
 STREAM_BYTES = 1 << 25
 
+# DFTs on rows of this size gain by being split.
+_SPLIT_BYTES = 1 << 17
+
 # Samples that are worth waking another worker for.
 WORKER_SAMPLES = 1 << 16
 
@@ -17,6 +20,14 @@ WORKER_SAMPLES = 1 << 16
 def slot_frames(channels):
     """Frames per execution of the DFT plan."""
     return max(1, min(_SLOT_SAMPLES // channels, 32))
+
+
+def split_radix(channels, row_bytes):
+    """Pieces to split a DFT into: 1 while a row and its result fit well into the caches."""
+    if row_bytes < _SPLIT_BYTES:
+        return 1
+    radix = 8 if row_bytes < 4 * _SPLIT_BYTES else 16
+    return radix if channels % (8 * radix) == 0 else 1  # pieces of whole vectors
 
 
 def block_frames(row_bytes, cycle, channel_major):

@@ -26,22 +26,27 @@ from chanbank._engine.lanes import (
     lane_bytes,
     lane_type,
     make_variant,
+    pieces_of,
 )
 from chanbank._engine.move import copy_bytes, transpose_frames
 from chanbank._engine.phase import exact_phase, mix, rotate_row, turn_row
+from chanbank._engine.radix import join_pieces
 
 __all__ = ["SYNTHESIS", "synthesis_run"]
 
 # A bank: its geometry, its buffers' addresses, its plan.
 #   rows: J; cycle: hops after which columns repeat; block, gather, slot: frames unfolded, taken in
-#   and transformed at a time; held: numbers per sample in the ring; bins: DFT points of a frame
-#   columns, weights: the frame's DFT points and factors (0: all, none)
+#   and transformed at a time; held: numbers per sample in the ring
+#   columns: the bytes from the start of a given row to each of the frame's DFT points (0: all)
+#   weights: a factor for each place of a given row (0: none)
 #   given, made: rows before and behind the DFT; summed: samples before they are delivered
+#   piece_stride, factors: of DFTs that are split
 #   mix, hop: the turn back per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 SYNTHESIS = record(
-    "channels hop rows cycle ring_rows block gather slot held bins rotate channel_major real_part"
+    "channels hop rows cycle ring_rows block gather slot held rotate channel_major real_part"
     " delay column_count columns weights taps tap_stride given given_stride made made_stride"
-    " row_stride summed summed_stride execute plan mix_table mix_high mix_low hop_high hop_low",
+    " row_stride summed summed_stride piece_stride factors factor_stride execute plan"
+    " mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,
     hop_high=np.uint64,
@@ -64,44 +69,52 @@ def _bank_at(typingctx, address):
 def _take(variant, bank, source, stride, count):
     """`count` frames from the caller's array to the rows that the DFT reads."""
     size = 2 * lane_bytes(variant)
+    pieces = pieces_of(variant)
+    length = bank.column_count // pieces
     if bank.channel_major != 0 and bank.columns == 0:
-        transpose_frames(
-            variant,
-            bank.given,
-            bank.given_stride,
-            source,
-            stride,
-            bank.column_count,
-            count,
-            False,
-        )
+        for piece in range(pieces):
+            transpose_frames(
+                variant,
+                bank.given + piece * bank.piece_stride,
+                bank.given_stride,
+                source + piece * stride,
+                stride * pieces,
+                length,
+                count,
+                False,
+            )
     for frame in range(count):
         row = bank.given + frame * bank.given_stride
         if bank.columns != 0:
             column_step = stride if bank.channel_major != 0 else size
             here = source + frame * (size if bank.channel_major != 0 else stride)
             _scatter(variant, bank, row, here, column_step)
+        elif bank.channel_major == 0 and pieces > 1:
+            here = source + frame * stride
+            step = pieces * size
+            transpose_frames(variant, row, bank.piece_stride, here, step, length, pieces, False)
         elif bank.channel_major == 0:
             copy_bytes(row, source + frame * stride, bank.column_count * size, False)
         if bank.weights != 0:
-            _weigh(variant, row, bank.weights, bank.bins)
+            _weigh(variant, row, bank.weights, bank.given_stride // size)
 
 
 @njit(nogil=True, error_model="numpy")
 def _scatter(variant, bank, row, source, step):
     """A frame's columns to their DFT points, all other points zero."""
-    place = carray(address_as_pointer(row), (2 * bank.bins,), lane_type(variant))
+    floats = bank.given_stride // lane_bytes(variant)
+    place = carray(address_as_pointer(row), (floats,), lane_type(variant))
     chosen = carray(address_as_pointer(bank.columns), (bank.column_count,), np.int64)
     size = 2 * lane_bytes(variant)
-    for i in range(2 * bank.bins):
+    for i in range(floats):
         place[i] = 0
     for i in range(bank.column_count):
-        copy_bytes(row + chosen[i] * size, source + i * step, size, False)
+        copy_bytes(row + chosen[i], source + i * step, size, False)
 
 
 @njit(nogil=True, error_model="numpy")
 def _weigh(variant, row, weights, count):
-    """A row times a complex factor for each DFT point, in place."""
+    """A row times a complex factor for each of its `count` places, in place."""
     place = carray(address_as_pointer(row), (2 * count,), lane_type(variant))
     factor = carray(address_as_pointer(weights), (2 * count,), lane_type(variant))
     for i in range(count):
@@ -122,9 +135,14 @@ def _transform(variant, bank, table, first, count):
     floats = bank.channels * bank.held
     for slot in range(0, count, bank.slot):
         place = (first + slot) % bank.ring_rows
+        given = bank.given + slot * bank.given_stride
+        if pieces_of(variant) > 1:  # a slot is one frame then, and rows stay as they are
+            execute_plan(bank.execute, bank.plan, given, bank.made)
+            _join(variant, bank, rows[place])
+            continue
         straight = bank.rotate != 0 and place + bank.slot <= bank.ring_rows
         target = rows[place] if straight else bank.made
-        execute_plan(bank.execute, bank.plan, bank.given + slot * bank.given_stride, target)
+        execute_plan(bank.execute, bank.plan, given, target)
         if straight:
             continue
         for index in range(min(bank.slot, count - slot)):
@@ -139,6 +157,22 @@ def _transform(variant, bank, table, first, count):
             if bank.mix_table != 0:
                 angle = exact_phase(bank.hop_high, bank.hop_low, frame)
                 turn_row(variant, row, bank.channels, angle)
+
+
+@njit(nogil=True, error_model="numpy")
+def _join(variant, bank, row):
+    """The last step of a split DFT, from the pieces' results to a row of the ring."""
+    size = bank.channels // pieces_of(variant) * bank.held * lane_bytes(variant)
+    join_pieces(
+        variant,
+        bank.made,
+        bank.piece_stride,
+        bank.factors,
+        bank.factor_stride,
+        row,
+        size,
+        size // VECTOR_BYTES,
+    )
 
 
 @njit(nogil=True, error_model="numpy")
@@ -206,7 +240,7 @@ _RUN = types.int64(*[types.int64] * 9)
 
 
 @cache
-def synthesis_run(lane, real, step):
+def synthesis_run(lane, real, step, radix):
     """The compiled push, as `analysis_run`: addresses and numbers only."""
     sources = source_digest()
     real = int(real)
@@ -218,7 +252,7 @@ def synthesis_run(lane, real, step):
         `source` is the address of frame `begin`, `stride` the bytes from frame to frame, or from
         column to column where frames come channel-major; `target` that of hop `first`.
         """
-        variant = make_variant(lane, real, step)
+        variant = make_variant(lane, real, step, radix)
         bank = _bank_at(bank_address)
         size = 2 * lane_bytes(variant)
         apart = size if bank.channel_major != 0 else stride

@@ -12,6 +12,7 @@ __all__ = [
     "address_or_zero",
     "aligned_bytes",
     "data_address",
+    "data_word",
     "odd_lines",
     "split_factors",
     "turn_words",
@@ -73,19 +74,21 @@ def split_factors(points, radix, stride, dtype, sign):
     return memory
 
 
-def _reader():
-    """How to find where an array's data lie: read from the array object, if that checks out.
-
-    The attribute for it builds a dictionary or an object on each call, which a push of a few
-    thousand samples would feel; the field itself is part of NumPy's binary interface.
-    """
-    word, head = ctypes.c_size_t.from_address, object.__basicsize__
-
-    def read(array):
-        return word(id(array) + head).value
-
-    probe = np.zeros(4)[1:]
-    return read if read(probe) == probe.ctypes.data else lambda array: array.ctypes.data
+# An array object keeps the address of its data behind the head that all objects have: that is part
+# of NumPy's binary interface. Attributes that tell it build an object on each call, which a push
+# of a few thousand samples would feel, so compiled code reads it there.
+_HEAD = object.__basicsize__
 
 
-data_address = _reader()
+def data_word(array):
+    """The address of the word that holds the address of an array's data."""
+    return id(array) + _HEAD
+
+
+def data_address(array):
+    return ctypes.c_size_t.from_address(data_word(array)).value
+
+
+_probe = np.zeros(4)[1:]
+if data_address(_probe) != _probe.ctypes.data:
+    raise ImportError("NumPy arrays are laid out in a way that the compiled engine does not know")

@@ -38,6 +38,8 @@ def _compiled():
         return False
     if importlib.util.find_spec("numba") is None:
         return False
-    from chanbank._engine.fftw import available
-
+    try:
+        from chanbank._engine.fftw import available
+    except ImportError:
+        return False
     return available()

@@ -24,7 +24,7 @@ from chanbank._engine.lanes import (
     make_variant,
     pieces_of,
 )
-from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames
+from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames, transpose_strips
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
 from chanbank._engine.stage import stage_run
 
@@ -38,15 +38,17 @@ def record(text, **special):
 
 # A bank: its geometry, its buffers' addresses, its plan.
 #   cycle: frames after which positions are whole rows apart; step: how many rows then
-#   block, gather, slot: frames folded, delivered and transformed at a time
+#   block, slot, gather: frames folded, transformed and (at most) delivered at a time
 #   held: numbers per sample in the ring
 #   turned: rows in frame phase (0: none needed); columns: the bytes from the start of a frame's
-#   bins to each chosen DFT point (0: all); pieces, factors: of DFTs that are split
+#   bins to each chosen DFT point (0: all); strip: a few channels' rows of `gather` frames
+#   piece_stride, factors: of DFTs that are split
 #   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 ANALYSIS = record(
     "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
     " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
-    " piece_stride factors factor_stride execute plan mix_table mix_high mix_low hop_high hop_low",
+    " strip strip_stride piece_stride factors factor_stride execute plan"
+    " mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,
     hop_high=np.uint64,
@@ -54,7 +56,7 @@ ANALYSIS = record(
 )
 
 # The operands of a run: words, but for `zero` and `scale`.
-_RUN = types.int64(*[types.int64] * 6, types.float64, types.float64, *[types.int64] * 8)
+_RUN = types.int64(*[types.int64] * 7, types.float64, types.float64, *[types.int64] * 9)
 
 
 @intrinsic
@@ -80,6 +82,11 @@ def _bank_at(typingctx, address):
         return builder.inttoptr(args[0], context.get_value_type(kind))
 
     return kind(types.int64), codegen
+
+
+@njit(nogil=True, error_model="numpy")
+def _word_at(address):
+    return carray(address_as_pointer(address), (1,), np.int64)[0]
 
 
 @njit(nogil=True, error_model="numpy")
@@ -119,8 +126,8 @@ def _stage(variant, bank, table, samples, begin, end):
 
 
 @njit(nogil=True, error_model="numpy")
-def _transform(variant, bank, first, start, count):
-    """DFTs of `count` folded frames from row `start` of the block, which begins at `first`.
+def _transform(variant, bank, first, start, count, bins):
+    """DFTs to `bins` of `count` folded frames from row `start` of the block that starts at `first`.
 
     The plan always runs on a whole slot: one plan for every frame keeps the bits independent of
     how many frames a push completes.
@@ -139,7 +146,7 @@ def _transform(variant, bank, first, start, count):
                     angle = exact_phase(bank.hop_high, bank.hop_low, frame)
                     turn_row(variant, row, bank.channels, angle)
             source = bank.turned
-        execute_plan(bank.execute, bank.plan, source, bank.bins + (slot - start) * bank.bins_stride)
+        execute_plan(bank.execute, bank.plan, source, bins + (slot - start) * bank.bins_stride)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -163,17 +170,17 @@ def _deliver(variant, bank, result, index, count):
             )
     elif bank.channel_major != 0:
         pieces = pieces_of(variant)
+        length = bank.column_count // pieces
         for piece in range(pieces):
-            transpose_frames(
-                variant,
-                target + piece * column_stride,
-                column_stride * pieces,
-                bank.bins + piece * bank.piece_stride,
-                bank.bins_stride,
-                count,
-                bank.column_count // pieces,
-                stream != 0,
-            )
+            here = target + piece * column_stride
+            apart = column_stride * pieces
+            source = bank.bins + piece * bank.piece_stride
+            rows = bank.bins_stride
+            if stream != 0:
+                strip, wide = bank.strip, bank.strip_stride
+                transpose_strips(variant, here, apart, source, rows, count, length, strip, wide)
+            else:
+                transpose_frames(variant, here, apart, source, rows, count, length, False)
     elif pieces_of(variant) > 1:
         pieces = pieces_of(variant)
         for frame in range(count):
@@ -214,11 +221,13 @@ def analysis_run(lane, real, step, radix):
         table,
         code,
         given,
-        source,
+        samples_word,
+        samples_offset,
         origin,
         zero,
         scale,
-        target,
+        result_word,
+        result_offset,
         frame_stride,
         column_stride,
         stream,
@@ -230,23 +239,32 @@ def analysis_run(lane, real, step, radix):
         """Take samples begin .. end - 1, deliver frames first .. last - 1.
 
         `table` holds the addresses of the ring's rows (see `Ring`); the operands from `code` on
-        are those of `_stage` and `_deliver`.
+        are those of `_stage` and `_deliver`, but that their addresses come as a word that holds
+        an address (see `data_word`) and bytes to add.
         """
         variant = make_variant(lane, real, step, radix)
         bank = _bank_at(bank_address)
+        source = _word_at(samples_word) + samples_offset
         samples = (code, given, source, origin, zero, scale)
+        target = _word_at(result_word) + result_offset
         result = (target, frame_stride, column_stride, stream)
-        time, frame = begin, first
+        time, frame, waiting = begin, first, 0
         while frame < last:
             count = min(bank.block, last - frame)
             newest = (frame + count - 1) * bank.hop + 1
             _stage(variant, bank, table, samples, time, newest)
             time = newest
             fold_block(variant, bank, table, frame, count)
-            for start in range(0, count, bank.gather):
-                size = min(bank.gather, count - start)
-                _transform(variant, bank, frame, start, size)
-                _deliver(variant, bank, result, frame + start - first, size)
+            part = min(bank.gather, bank.block)
+            for start in range(0, count, part):
+                size = min(part, count - start)
+                bins = bank.bins + waiting * bank.bins_stride
+                _transform(variant, bank, frame, start, size, bins)
+                waiting += size
+                done = frame + start + size
+                if waiting == bank.gather or done == last:
+                    _deliver(variant, bank, result, done - waiting - first, waiting)
+                    waiting = 0
             frame += count
         _stage(variant, bank, table, samples, time, end)
         if stream != 0:

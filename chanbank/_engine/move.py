@@ -11,9 +11,16 @@ from numba import carray, njit, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
+from chanbank._engine.buffers import LINE
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, address_as_pointer, lane_bytes
 
-__all__ = ["copy_bytes", "copy_columns", "transpose_frames"]
+__all__ = ["STRIP_COLUMNS", "copy_bytes", "copy_columns", "transpose_frames", "transpose_strips"]
+
+# Channels transposed into a strip at a time.
+STRIP_COLUMNS = 8
+
+# Vectors in a cache line.
+_A_LINE = LINE // VECTOR_BYTES
 
 
 @intrinsic(prefer_literal=True)
@@ -68,25 +75,39 @@ def copy_columns(variant, target, step, source, columns, count):
 
 
 @intrinsic(prefer_literal=True)
-def _transpose_square(typingctx, variant, stream, target, target_stride, source, source_stride):
-    """A square of complex numbers, one vector a side, transposed in registers."""
-    past = bool(stream.literal_value)
+def _transpose_squares(
+    typingctx, variant, squares, stream, target, target_stride, source, source_stride
+):
+    """Squares of complex numbers, one vector a side, transposed in registers.
+
+    The squares lie below each other in the source and side by side in the target. There each row
+    is stored in one go: results are often a power of two apart, and lines that alias would push
+    each other's halves out of the processor's few write buffers.
+    """
+    count, past = squares.literal_value, bool(stream.literal_value)
 
     def codegen(context, builder, signature, args):
-        _, _, target, target_stride, source, source_stride = args
+        _, _, _, target, target_stride, source, source_stride = args
         lanes = Lanes(builder, variant.lane)
         side = lanes.width // 2
-        rows = [lanes.load(lanes.add(source, lanes.times(source_stride, r))) for r in range(side)]
-        block = side // 2
-        while block:
-            rows = _exchange(lanes, rows, block)
-            block //= 2
-        for r, row in enumerate(rows):
+        done = []
+        for square in range(count):
+            starts = [lanes.times(source_stride, square * side + r) for r in range(side)]
+            rows = [lanes.load(lanes.add(source, start)) for start in starts]
+            block = side // 2
+            while block:
+                rows = _exchange(lanes, rows, block)
+                block //= 2
+            done.append(rows)
+        for r in range(side):
             place = lanes.add(target, lanes.times(target_stride, r))
-            lanes.store(row, place, align=VECTOR_BYTES if past else variant.lane, stream=past)
+            for square in range(count):
+                here = lanes.add(place, square * VECTOR_BYTES)
+                align = VECTOR_BYTES if past else variant.lane
+                lanes.store(done[square][r], here, align=align, stream=past)
         return context.get_dummy_value()
 
-    return types.void(variant, stream, *[types.int64] * 4), codegen
+    return types.void(variant, squares, stream, *[types.int64] * 4), codegen
 
 
 def _exchange(lanes, rows, block):
@@ -111,20 +132,49 @@ def transpose_frames(variant, target, stride, source, source_stride, frames, col
     """Frames in rows to channels in rows `stride` bytes apart; squares of one vector a side."""
     size = 2 * lane_bytes(variant)
     side = VECTOR_BYTES // size
+    line = LINE // size
     past = stream and target % VECTOR_BYTES == 0 and stride % VECTOR_BYTES == 0
     whole_frames = frames // side * side
     whole_columns = columns // side * side
     for column in range(0, whole_columns, side):
-        for frame in range(0, whole_frames, side):
+        frame = 0
+        while frame < whole_frames:
             here = target + column * stride + frame * size
             there = source + frame * source_stride + column * size
-            if past:
-                _transpose_square(variant, True, here, stride, there, source_stride)
+            if frame + line <= frames:
+                if past:
+                    _transpose_squares(variant, _A_LINE, True, here, stride, there, source_stride)
+                else:
+                    _transpose_squares(variant, _A_LINE, False, here, stride, there, source_stride)
+                frame += line
             else:
-                _transpose_square(variant, False, here, stride, there, source_stride)
+                if past:
+                    _transpose_squares(variant, 1, True, here, stride, there, source_stride)
+                else:
+                    _transpose_squares(variant, 1, False, here, stride, there, source_stride)
+                frame += side
     for column in range(columns):
         first = whole_frames if column < whole_columns else 0
         for frame in range(first, frames):
             here = target + column * stride + frame * size
             there = source + frame * source_stride + column * size
             _copy_whole(8, False, here, there, size // 8)
+
+
+@njit(nogil=True, error_model="numpy")
+def transpose_strips(
+    variant, target, stride, source, source_stride, frames, columns, strip, strip_stride
+):
+    """Like `transpose_frames`, by way of a strip of rows in cache, and past the caches from there.
+
+    Rows a power of two apart share a bank of the memory: going from one to the next with every
+    line costs several times what long runs cost.
+    """
+    size = 2 * lane_bytes(variant)
+    for column in range(0, columns, STRIP_COLUMNS):
+        count = min(STRIP_COLUMNS, columns - column)
+        there = source + column * size
+        transpose_frames(variant, strip, strip_stride, there, source_stride, frames, count, False)
+        for row in range(count):
+            here = target + (column + row) * stride
+            copy_bytes(here, strip + row * strip_stride, frames * size, True)

@@ -9,19 +9,21 @@ from chanbank._engine.buffers import (
     Ring,
     address_or_zero,
     aligned_bytes,
-    data_address,
+    data_word,
     odd_lines,
     split_factors,
     turn_words,
 )
 from chanbank._engine.driver import ANALYSIS, analysis_run
 from chanbank._engine.fftw import make_plan
+from chanbank._engine.move import STRIP_COLUMNS
 from chanbank._engine.phase import MIX_BLOCK
 from chanbank._engine.rotor import unit_circle
 from chanbank._engine.sizes import (
     STREAM_BYTES,
     WORKER_SAMPLES,
     block_frames,
+    gather_frames,
     slot_frames,
     split_radix,
 )
@@ -77,54 +79,73 @@ class NumbaAnalysisEngine:
             time += count
 
     def push(self, samples, out, zero=0.0, scale=1.0):
-        """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`."""
+        """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`.
+
+        With one antenna, both may lack that axis.
+        """
         code, given, numbers = self.forms[samples.dtype]
         if not samples.flags.aligned:
             samples = samples.copy()
-        form = (code, given, data_address(samples), zero, scale)
-        count = samples.shape[1]
-        self._push(form, samples.strides[0], count // numbers, out)
+        form = (code, given, samples, zero, scale)
+        self._push(form, samples.shape[-1] // numbers, out)
 
     def push_zeros(self, count, out):
         """Take `count` zero samples; once the window holds only zeros, frames are zeros too."""
         hop, layout = self.spec.hop, self.layout
         busy = min(count, layout.window + self.spec.channels)
         frames = -(-(self.position + busy) // hop) - -(-self.position // hop)
-        form = (ZEROS, layout.held, 0, 0.0, 1.0)
-        self._push(form, 0, busy, out)
+        form = (ZEROS, layout.held, out, 0.0, 1.0)  # no samples are read
+        self._push(form, busy, out)
         if count > busy:
             self.reset(self.position + count - busy, len(self.rings))
             rest = out[:, :, frames:] if self.spec.channel_major else out[:, frames:]
             rest[...] = 0
 
-    def _push(self, form, stride, count, out):
-        code, given, source, zero, scale = form
+    def _push(self, form, count, out):
         origin, hop = self.position, self.spec.hop
         end = origin + count
         part = (origin, end, -(-origin // hop), -(-end // hop))
-        apart, frame_stride, column_stride = out.strides
-        if self.spec.channel_major:
-            frame_stride, column_stride = column_stride, frame_stride
-        samples = (code, given, source, origin, zero, scale)
-        strides = (frame_stride, column_stride, out.nbytes >= STREAM_BYTES and out.flags.aligned)
-        target = data_address(out)
         if len(self.rings) == 1 and (self.alone or count < 2 * WORKER_SAMPLES):
-            worker, ring = self.crew.members[0], self.rings[0]
-            self.run(worker.address, ring.address, *samples, target, *strides, *part)
+            self._run(self.crew.members[0], self.rings[0], form, origin, 0, out, 0, part)
         else:
-            self._deal(samples, stride, target, apart, strides, part)
+            self._deal(form, origin, out, part)
         self.position = end
 
-    def _deal(self, samples, stride, target, apart, strides, part):
+    def _run(self, worker, ring, form, origin, samples_offset, out, out_offset, part):
+        """One compiled call: samples and frames `part`, some bytes into the push's arrays."""
+        code, given, samples, zero, scale = form
+        frame_stride, column_stride = out.strides[-2:]
+        if self.spec.channel_major:
+            frame_stride, column_stride = column_stride, frame_stride
+        self.run(
+            worker.address,
+            ring.address,
+            code,
+            given,
+            data_word(samples),
+            samples_offset,
+            origin,
+            zero,
+            scale,
+            data_word(out),
+            out_offset,
+            frame_stride,
+            column_stride,
+            out.nbytes >= STREAM_BYTES and out.flags.aligned,
+            *part,
+        )
+
+    def _deal(self, form, origin, out, part):
         """Antennas and stretches of frames to the workers, on threads."""
-        code, given, source, *rest = samples
-        first = part[2]
+        samples, first = form[2], part[2]
+        samples_apart = samples.strides[0] if samples.ndim == 2 else 0
+        out_apart = out.strides[0] if out.ndim == 3 else 0
+        frame_stride = out.strides[-1 if self.spec.channel_major else -2]
 
         def work(worker, jobs):
             for antenna, ring, part in jobs:
-                here = target + antenna * apart + (part[2] - first) * strides[0]
-                given_samples = (code, given, source + antenna * stride, *rest)
-                self.run(worker.address, ring.address, *given_samples, here, *strides, *part)
+                there = antenna * out_apart + (part[2] - first) * frame_stride
+                self._run(worker, ring, form, origin, antenna * samples_apart, out, there, part)
 
         self.crew.run(work, self._jobs(*part))
 
@@ -197,9 +218,11 @@ class _Layout:
         if self.radix > 1:
             self.folded_stride = self.bins_stride = self.radix * self.piece_stride + LINE
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
+        frames = block_frames(self.row_bytes, self.cycle)
         self.block = max(self.slot, frames // self.slot * self.slot)
-        self.gather = self.block if spec.channel_major else self.slot
+        self.gather = self.slot
+        if spec.channel_major:
+            self.gather = gather_frames(self.row_bytes, self.block)
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
         # Of a split DFT the plan makes all pieces of one frame, which are rows to it.
         self.plan = make_plan(
@@ -240,6 +263,8 @@ class _Worker:
             -(-layout.gather // layout.slot) * layout.slot * layout.bins_stride
         )
         self.turned = aligned_bytes(layout.slot * layout.folded_stride) if layout.turned else None
+        strip_stride = odd_lines(layout.gather * 2 * layout.lane)
+        self.strip = aligned_bytes(STRIP_COLUMNS * strip_stride) if spec.channel_major else None
         self.records = np.zeros(1, ANALYSIS)
         self.address = self.records.ctypes.data
         self.record = record = self.records[0]
@@ -265,6 +290,8 @@ class _Worker:
             "turned": address_or_zero(self.turned),
             "bins": address_or_zero(self.bins),
             "bins_stride": layout.bins_stride,
+            "strip": address_or_zero(self.strip),
+            "strip_stride": strip_stride,
             "piece_stride": layout.piece_stride,
             "factors": address_or_zero(layout.factors),
             "factor_stride": layout.piece_stride,

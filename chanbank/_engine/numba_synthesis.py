@@ -21,6 +21,7 @@ from chanbank._engine.sizes import (
     STREAM_BYTES,
     WORKER_SAMPLES,
     block_frames,
+    gather_frames,
     slot_frames,
     split_radix,
 )
@@ -176,7 +177,9 @@ class _Layout:
             self.given_stride = self.radix * self.piece_stride + LINE
         self.summed_stride = odd_lines(hop * self.held * self.lane)
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle, spec.channel_major)
+        frames = block_frames(self.row_bytes, self.cycle)
+        if spec.channel_major:
+            frames = max(frames, gather_frames(self.row_bytes, 1) // 2)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.reach + self.block + self.slot

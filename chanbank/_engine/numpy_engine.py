@@ -53,7 +53,12 @@ class NumpyAnalysisEngine:
         self.buffer[:, : self.window - 1] = held
 
     def push(self, samples, out, zero=0.0, scale=1.0):
-        """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`."""
+        """Take samples (antennas, n), or (antennas, 2n) interleaved integers; fill `out`.
+
+        With one antenna, both may lack that axis.
+        """
+        if samples.ndim == 1:
+            samples, out = samples[None], out[None]
         per_sample = 2 if samples.dtype.kind in "iu" and not self.spec.real else 1
         count = samples.shape[1] // per_sample
         done = frames = 0

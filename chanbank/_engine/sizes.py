@@ -1,6 +1,13 @@
 """How much to do at a time: blocks that fit the caches, slots of the DFT plans, workers' shares."""
 
-__all__ = ["STREAM_BYTES", "WORKER_SAMPLES", "block_frames", "slot_frames", "split_radix"]
+__all__ = [
+    "STREAM_BYTES",
+    "WORKER_SAMPLES",
+    "block_frames",
+    "gather_frames",
+    "slot_frames",
+    "split_radix",
+]
 
 # Samples per execution of the DFT plan, where frames are short: the stores of one slot drain while
 # the next is computed, and a small push completes whole slots.
@@ -30,16 +37,24 @@ def split_radix(channels, row_bytes):
     return radix if channels % (8 * radix) == 0 else 1  # pieces of whole vectors
 
 
-def block_frames(row_bytes, cycle, channel_major):
+def block_frames(row_bytes, cycle):
     """Frames to fold at a time.
 
-    Small blocks, so that the samples fetched for the next one still fit beside them in the
-    second-level cache; but eight frames of every residue where they fit in 2 MiB, since up to
-    eight frames share a loaded row, and four within 4 MiB where rows come from the third level.
-    Channel-major results ask for more frames, since so many go side by side.
+    Small blocks, which stay in the second-level cache; but eight frames of every residue where
+    they fit in 2 MiB, since up to eight frames share a loaded row, and four within 4 MiB where
+    rows come from the third level.
     """
-    least = 1 << 18 if channel_major else 1 << 16
-    small, large, limit = (size // row_bytes for size in (least, 1 << 21, 1 << 22))
+    small, large, limit = (size // row_bytes for size in (1 << 16, 1 << 21, 1 << 22))
     if 2 * cycle > limit:
         return max(1, small)
     return max(1, small, min(8 * cycle, max(4 * cycle, large), limit))
+
+
+def gather_frames(row_bytes, block):
+    """Frames that go side by side into channel-major results, in whole blocks.
+
+    Long runs in every channel: memory that is written in short pieces far apart takes several
+    times as long. At 64 frames a run is eight cache lines or more.
+    """
+    frames = max((1 << 18) // row_bytes, 64)
+    return block * max(1, min(frames, (1 << 22) // row_bytes) // block)

@@ -28,8 +28,9 @@ def checked_out(out, shape, dtype):
         raise wrong_type("out", f"None or an array of shape {shape} and dtype {dtype.name}", out)
     if out.dtype != dtype or out.shape != shape:
         raise wrong_value("out", f"an array of shape {shape} and dtype {dtype.name}", out)
-    if not out.flags.c_contiguous or not out.flags.writeable:
-        state = "read-only" if not out.flags.writeable else f"strides {out.strides}"
+    flags = out.flags
+    if not flags.carray and not (flags.c_contiguous and flags.writeable):
+        state = "read-only" if not flags.writeable else f"strides {out.strides}"
         raise ValueError(f"out must be C-contiguous and writable; got {state}")
     return out
 

@@ -491,17 +491,19 @@ class AnalysisBank(Bank):
         return out[..., start:stop] if self._spec.channel_major else out[..., start:stop, :]
 
     def _run(self, push, samples, out):
-        lines = flat_leading(samples, 1)
-        integers = self._integers.get(samples.dtype)
-        if integers is None:
-            push(lines, flat_leading(out, 2))
+        if samples.ndim > 1:
+            samples, out = flat_leading(samples, 1), flat_leading(out, 2)
+        if samples.dtype in self._floats:
+            push(samples, out)
         else:
-            push(lines, flat_leading(out, 2), *integers)
+            push(samples, out, *self._integers[samples.dtype])
 
     def _checked_samples(self, samples):
         """The samples as the engine takes them, how many there are, and their leading axes."""
         array = samples if type(samples) is np.ndarray else np.asarray(samples)
         kind = array.dtype
+        if kind in self._floats and array.ndim and array.flags.c_contiguous:
+            return array, array.shape[-1], array.shape[:-1]
         if array.ndim == 0 and kind.kind in "iufc":
             raise wrong_value("samples", "an array whose last axis is time", samples)
         if kind not in self._floats:

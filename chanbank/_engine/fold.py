@@ -18,14 +18,14 @@ from numba.extending import intrinsic
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes, pieces_of
 from chanbank._engine.radix import split_pieces
 
-__all__ = ["TILE", "fold_block", "fold_rows"]
+__all__ = ["fold_block", "fold_rows", "tile_columns"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
-# Columns (in vectors) folded for all frames before going on: the rows' pieces and their taps stay
-# in the first-level cache.
-TILE = 2048 // VECTOR_BYTES
+# Bytes of a row folded for all frames before going on: the rows' parts and their taps stay in the
+# caches. Rows of long DFTs come from the third level or from memory, which deliver long runs best.
+_TILE_BYTES, _LONG_TILE_BYTES = 1 << 11, 1 << 13
 
 
 @intrinsic(prefer_literal=True)
@@ -137,6 +137,12 @@ def fold_rows(variant, rows, taps, out, frames, vectors):
 
 
 @njit(nogil=True, error_model="numpy")
+def tile_columns(variant, sample_bytes):
+    """Columns folded for all frames before going on."""
+    return (_LONG_TILE_BYTES if pieces_of(variant) > 1 else _TILE_BYTES) // sample_bytes
+
+
+@njit(nogil=True, error_model="numpy")
 def fold_block(variant, bank, table, first, count):
     """Fold frames first .. first + count - 1, those that are whole rows apart together.
 
@@ -145,7 +151,7 @@ def fold_block(variant, bank, table, first, count):
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = TILE * per_vector
+    tile = tile_columns(variant, sample_bytes)
     pieces = pieces_of(variant)
     length = bank.channels // pieces
     for start in range(0, length, tile):

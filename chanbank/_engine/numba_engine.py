@@ -218,7 +218,7 @@ class _Layout:
         if self.radix > 1:
             self.folded_stride = self.bins_stride = self.radix * self.piece_stride + LINE
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle)
+        frames = block_frames(self.row_bytes, self.cycle, self.rows)
         self.block = max(self.slot, frames // self.slot * self.slot)
         self.gather = self.slot
         if spec.channel_major:

@@ -177,7 +177,7 @@ class _Layout:
             self.given_stride = self.radix * self.piece_stride + LINE
         self.summed_stride = odd_lines(hop * self.held * self.lane)
         self.slot = slot_frames(channels)
-        frames = block_frames(self.row_bytes, self.cycle)
+        frames = block_frames(self.row_bytes, self.cycle, self.reach)
         if spec.channel_major:
             frames = max(frames, gather_frames(self.row_bytes, 1) // 2)
         self.block = max(self.slot, frames // self.slot * self.slot)

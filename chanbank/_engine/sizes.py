@@ -37,17 +37,18 @@ def split_radix(channels, row_bytes):
     return radix if channels % (8 * radix) == 0 else 1  # pieces of whole vectors
 
 
-def block_frames(row_bytes, cycle):
-    """Frames to fold at a time.
+def block_frames(row_bytes, cycle, rows):
+    """Frames to fold at a time, each from `rows` rows.
 
     Small blocks, which stay in the second-level cache; but eight frames of every residue where
-    they fit in 2 MiB, since up to eight frames share a loaded row, and four within 4 MiB where
-    rows come from the third level.
+    they fit in 2 MiB, since up to eight frames share a loaded row, and half as many as rows (four
+    at least) within 4 MiB, where rows come from the third level or from memory.
     """
     small, large, limit = (size // row_bytes for size in (1 << 16, 1 << 21, 1 << 22))
     if 2 * cycle > limit:
         return max(1, small)
-    return max(1, small, min(8 * cycle, max(4 * cycle, large), limit))
+    sharing = min(8, max(4, rows // 2))
+    return max(1, small, min(8 * cycle, max(sharing * cycle, large), limit))
 
 
 def gather_frames(row_bytes, block):

@@ -18,7 +18,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.compiling import compiled
 from chanbank._engine.driver import execute_plan, record, source_digest
-from chanbank._engine.fold import TILE, fold_rows
+from chanbank._engine.fold import fold_rows, tile_columns
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
@@ -184,7 +184,7 @@ def _unfold(variant, bank, table, first, count):
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = TILE * per_vector
+    tile = tile_columns(variant, sample_bytes)
     stride = bank.cycle * bank.summed_stride
     for start in range(0, bank.hop, tile):
         stop = min(start + tile, bank.hop)

@@ -4,8 +4,8 @@ Plans are made when a bank is built, never in the middle of a stream. Up to 2**1
 measures, within a time limit; the wisdom goes to the user's cache folder, so that the next process
 plans at once and gets the same plans (and so the same bits). Two environment variables change this:
 CHANBANK_CACHE names another folder, or "off"; CHANBANK_PLANNING=patient lets FFTW search as long
-as it likes, up to a minute for the longest transforms, which makes them a fifth faster from 2**14
-points on, in later processes too.
+as it likes: seconds, up to a minute for long transforms that are not split (real samples, frame
+phase), which may become a fifth faster, in later processes too.
 """
 
 import contextlib

@@ -18,7 +18,7 @@ _SLOT_SAMPLES = 1 << 10
 STREAM_BYTES = 1 << 25
 
 # DFTs on rows of this size gain by being split.
-_SPLIT_BYTES = 1 << 17
+_SPLIT_BYTES = 1 << 16
 
 # Samples that are worth waking another worker for.
 WORKER_SAMPLES = 1 << 16
@@ -33,7 +33,7 @@ def split_radix(channels, row_bytes):
     """Pieces to split a DFT into: 1 while a row and its result fit well into the caches."""
     if row_bytes < _SPLIT_BYTES:
         return 1
-    radix = 8 if row_bytes < 4 * _SPLIT_BYTES else 16
+    radix = 8 if row_bytes < 8 * _SPLIT_BYTES else 16
     return radix if channels % (8 * radix) == 0 else 1  # pieces of whole vectors
 
 

@@ -164,10 +164,10 @@ def test_frames_in_frame_phase_are_not_split(splitting):
     assert NumbaAnalysisEngine(spec).layout.radix == 1
 
 
-@pytest.mark.parametrize("channels", [16384, 65536, 16384 + 8, 12345])
+@pytest.mark.parametrize("channels", [4096, 8192, 16384, 65536, 16384 + 8, 12345])
 def test_what_is_split(channels):
     radix = split_radix(channels, 8 * channels)
-    assert radix == {16384: 8, 65536: 16}.get(channels, 1)
+    assert radix == {8192: 8, 16384: 8, 65536: 16}.get(channels, 1)
     if radix == 1:
         return
     spec = analysis_spec(channels, channels, "complex64", turn=Fraction(0))

@@ -14,6 +14,7 @@ __all__ = [
     "data_address",
     "data_word",
     "odd_lines",
+    "real_factors",
     "split_factors",
     "turn_words",
 ]
@@ -71,6 +72,14 @@ def split_factors(points, radix, stride, dtype, sign):
     columns = np.arange(points // radix)
     for piece, row in enumerate(table, 1):
         row[: len(columns)] = np.exp(sign * 2j * np.pi * (columns * piece % points) / points)
+    return memory
+
+
+def real_factors(points, dtype):
+    """-1j exp(-2j pi k / points), k up to a quarter of the points and a vector more."""
+    count = points // 4 + 2 * LINE // dtype.itemsize
+    memory = aligned_bytes(count * dtype.itemsize)
+    memory.view(dtype)[...] = -1j * np.exp(-2j * np.pi * np.arange(count) / points)
     return memory
 
 

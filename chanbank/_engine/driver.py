@@ -20,12 +20,15 @@ from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
     fence,
+    is_real,
     lane_bytes,
+    lane_type,
     make_variant,
     pieces_of,
 )
 from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames, transpose_strips
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
+from chanbank._engine.radix import real_spectrum
 from chanbank._engine.stage import stage_run
 
 __all__ = ["ANALYSIS", "analysis_run", "execute_plan", "record", "source_digest"]
@@ -42,12 +45,13 @@ def record(text, **special):
 #   held: numbers per sample in the ring
 #   turned: rows in frame phase (0: none needed); columns: the bytes from the start of a frame's
 #   bins to each chosen DFT point (0: all); strip: a few channels' rows of `gather` frames
-#   piece_stride, factors: of DFTs that are split
+#   piece_stride, factors: of DFTs that are split; halves, line, real_factors: of those of real
+#   samples, the pieces behind the DFT, the same in one row, and the last pass's factors
 #   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 ANALYSIS = record(
     "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
     " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
-    " strip strip_stride piece_stride factors factor_stride execute plan"
+    " strip strip_stride piece_stride factors factor_stride halves line real_factors execute plan"
     " mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,
@@ -146,7 +150,31 @@ def _transform(variant, bank, first, start, count, bins):
                     angle = exact_phase(bank.hop_high, bank.hop_low, frame)
                     turn_row(variant, row, bank.channels, angle)
             source = bank.turned
+        if is_real(variant) and pieces_of(variant) > 1:  # a slot is one frame then
+            execute_plan(bank.execute, bank.plan, source, bank.halves)
+            _real_row(variant, bank, bins + (slot - start) * bank.bins_stride)
+            continue
         execute_plan(bank.execute, bank.plan, source, bins + (slot - start) * bank.bins_stride)
+
+
+@njit(nogil=True, error_model="numpy")
+def _real_row(variant, bank, target):
+    """The spectrum of a row of real samples from the pieces that the split DFT left."""
+    pieces, size = pieces_of(variant), 2 * lane_bytes(variant)
+    points = bank.channels // 2
+    transpose_frames(
+        variant,
+        bank.line,
+        pieces * size,
+        bank.halves,
+        bank.piece_stride,
+        pieces,
+        points // pieces,
+        False,
+    )
+    line = carray(address_as_pointer(bank.line), (2 * points + 2,), lane_type(variant))
+    line[2 * points], line[2 * points + 1] = line[0], line[1]
+    real_spectrum(variant, bank.line, bank.real_factors, target, points)
 
 
 @njit(nogil=True, error_model="numpy")
@@ -158,6 +186,7 @@ def _deliver(variant, bank, result, index, count):
     """
     address, frame_stride, column_stride, stream = result
     target = address + index * frame_stride
+    pieces = 1 if is_real(variant) else pieces_of(variant)
     if bank.columns != 0:
         for frame in range(count):
             copy_columns(
@@ -169,7 +198,6 @@ def _deliver(variant, bank, result, index, count):
                 bank.column_count,
             )
     elif bank.channel_major != 0:
-        pieces = pieces_of(variant)
         length = bank.column_count // pieces
         for piece in range(pieces):
             here = target + piece * column_stride
@@ -181,8 +209,7 @@ def _deliver(variant, bank, result, index, count):
                 transpose_strips(variant, here, apart, source, rows, count, length, strip, wide)
             else:
                 transpose_frames(variant, here, apart, source, rows, count, length, False)
-    elif pieces_of(variant) > 1:
-        pieces = pieces_of(variant)
+    elif pieces > 1:
         for frame in range(count):
             transpose_frames(
                 variant,

@@ -11,6 +11,7 @@ from chanbank._engine.buffers import (
     aligned_bytes,
     data_word,
     odd_lines,
+    real_factors,
     split_factors,
     turn_words,
 )
@@ -210,13 +211,18 @@ class _Layout:
         self.row_bytes = channels * self.held * self.lane
         self.row_stride = odd_lines(self.row_bytes)
         self.turned = not spec.rotate and (hop != channels or spec.turn != 0)
-        split = self.paired and not self.turned
-        self.radix = split_radix(channels, self.row_bytes) if split else 1
+        # A split DFT of real samples is one of half as many complex ones.
+        points, self.radix = channels if self.paired else channels // 2, 1
+        if not self.turned and self.row_bytes == points * 2 * self.lane:
+            self.radix = split_radix(points, self.row_bytes)
         bins = channels if self.paired else channels // 2 + 1
-        self.piece_stride = odd_lines(bins // self.radix * 2 * self.lane)
-        self.folded_stride, self.bins_stride = self.row_stride, self.piece_stride
+        self.bins_stride = odd_lines(bins * 2 * self.lane)
+        self.folded_stride, self.piece_stride = self.row_stride, self.bins_stride
         if self.radix > 1:
-            self.folded_stride = self.bins_stride = self.radix * self.piece_stride + LINE
+            self.piece_stride = odd_lines(points // self.radix * 2 * self.lane)
+            self.folded_stride = self.radix * self.piece_stride + LINE
+            if self.paired:
+                self.bins_stride = self.folded_stride
         self.slot = slot_frames(channels)
         frames = block_frames(self.row_bytes, self.cycle, self.rows)
         self.block = max(self.slot, frames // self.slot * self.slot)
@@ -226,20 +232,23 @@ class _Layout:
         self.ring_rows = self.rows + 2 + -(-(self.block - 1) * hop // channels)
         # Of a split DFT the plan makes all pieces of one frame, which are rows to it.
         self.plan = make_plan(
-            channels // self.radix,
+            channels if self.radix == 1 else points // self.radix,
             self.slot * self.radix,
             spec.dtype,
-            "forward" if self.paired else "real",
+            "forward" if self.paired or self.radix > 1 else "real",
             self.folded_stride if self.radix == 1 else self.piece_stride,
             self.piece_stride,
         )
-        self.factors = None
+        self.factors = self.real_factors = None
         if self.radix > 1:
-            self.factors = split_factors(channels, self.radix, self.piece_stride, spec.dtype, -1)
+            self.factors = split_factors(points, self.radix, self.piece_stride, spec.dtype, -1)
+            if not self.paired:
+                self.real_factors = real_factors(channels, spec.dtype)
         self.taps, self.tap_stride = _tap_rows(spec.taps, self.rows, channels, self.lane)
         self.columns = None
         if spec.columns is not None:
-            outer, inner = np.divmod(np.array(spec.columns, np.int64), self.radix)
+            pieces = self.radix if self.paired else 1
+            outer, inner = np.divmod(np.array(spec.columns, np.int64), pieces)
             self.columns = inner * self.piece_stride + outer * 2 * self.lane
         self.mixer = None
         if spec.turn:
@@ -263,6 +272,10 @@ class _Worker:
             -(-layout.gather // layout.slot) * layout.slot * layout.bins_stride
         )
         self.turned = aligned_bytes(layout.slot * layout.folded_stride) if layout.turned else None
+        self.halves = self.line = None
+        if layout.real_factors is not None:
+            self.halves = aligned_bytes(layout.folded_stride)
+            self.line = aligned_bytes(layout.bins_stride)
         strip_stride = odd_lines(layout.gather * 2 * layout.lane)
         self.strip = aligned_bytes(STRIP_COLUMNS * strip_stride) if spec.channel_major else None
         self.records = np.zeros(1, ANALYSIS)
@@ -295,6 +308,9 @@ class _Worker:
             "piece_stride": layout.piece_stride,
             "factors": address_or_zero(layout.factors),
             "factor_stride": layout.piece_stride,
+            "halves": address_or_zero(self.halves),
+            "line": address_or_zero(self.line),
+            "real_factors": address_or_zero(layout.real_factors),
             "execute": layout.plan.execute,
             "plan": layout.plan.address,
             "mix_table": address_or_zero(layout.mixer),

@@ -9,6 +9,9 @@ the braces are R-point DFTs across the R pieces of a row, column by column. They
 registers while a tile of the row has just been folded; what is left are R short DFTs, piece by
 piece, whose results are interleaved on their way out. The inverse runs the other way round: short
 DFTs first, then the factors and the R-point DFTs.
+
+A long row of real samples is taken as complex ones of half the length, two by two, so that all this
+serves it too; a last pass makes the spectrum of the real row from that of the complex one.
 """
 
 import cmath
@@ -21,7 +24,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.lanes import VECTOR_BYTES, Lanes
 
-__all__ = ["join_pieces", "split_pieces"]
+__all__ = ["join_pieces", "real_spectrum", "split_pieces"]
 
 
 @intrinsic
@@ -70,6 +73,42 @@ def join_pieces(typingctx, variant, source, stride, factors, factor_stride, targ
         return context.get_dummy_value()
 
     return types.void(variant, *[types.int64] * 7), codegen
+
+
+@intrinsic
+def real_spectrum(typingctx, variant, source, factors, target, points):
+    """The DFT of M real numbers from that of the same taken as H = M/2 complex ones, Z.
+
+        X[k], conj(X[H - k]) = E + F, E - F,
+        E = (Z[k] + conj(Z[H - k])) / 2,   F = factor[k] (Z[k] - conj(Z[H - k])) / 2,
+
+    with factor[k] = -1j W_M^k, for k = 0 .. H/2 (J. W. Cooley, P. A. W. Lewis and P. D. Welch, J.
+    Sound Vib. 12, 1970). `points` is H, a multiple of a vector's; `source` holds Z[H] = Z[0] too.
+    """
+
+    def codegen(context, builder, signature, args):
+        lanes = Lanes(builder, variant.lane)
+        _, source, factors, target, points = args
+        size, side = 2 * variant.lane, lanes.width // 2
+        vectors = lanes.add(builder.udiv(points, lanes.index(2 * side)), 1)
+        mirrored = [2 * (side - 1 - lane // 2) + lane % 2 for lane in range(lanes.width)]
+        conjugate, half = _constant(lanes, (1.0, -1.0)), _constant(lanes, (0.5, 0.5))
+        with cgutils.for_range(builder, vectors) as loop:
+            along = lanes.times(loop.index, VECTOR_BYTES)
+            last = builder.sub(lanes.times(points, size), along)
+            behind = builder.sub(last, lanes.index((side - 1) * size))
+            upper = lanes.load(lanes.add(source, along))
+            lower = lanes.load(lanes.add(source, behind))
+            lower = builder.fmul(lanes.pick(lower, lower, mirrored), conjugate)
+            even = builder.fmul(builder.fadd(upper, lower), half)
+            odd = builder.fmul(builder.fsub(upper, lower), half)
+            odd = _product(lanes, odd, lanes.load(lanes.add(factors, along)))
+            lanes.store(builder.fadd(even, odd), lanes.add(target, along))
+            rest = builder.fmul(builder.fsub(even, odd), conjugate)
+            lanes.store(lanes.pick(rest, rest, mirrored), lanes.add(target, behind))
+        return context.get_dummy_value()
+
+    return types.void(variant, *[types.int64] * 4), codegen
 
 
 class _Pieces:

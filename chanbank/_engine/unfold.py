@@ -105,11 +105,12 @@ def _scatter(variant, bank, row, source, step):
     floats = bank.given_stride // lane_bytes(variant)
     place = carray(address_as_pointer(row), (floats,), lane_type(variant))
     chosen = carray(address_as_pointer(bank.columns), (bank.column_count,), np.int64)
-    size = 2 * lane_bytes(variant)
     for i in range(floats):
         place[i] = 0
     for i in range(bank.column_count):
-        copy_bytes(row + chosen[i], source + i * step, size, False)
+        given = carray(address_as_pointer(source + i * step), (2,), lane_type(variant))
+        point = chosen[i] // lane_bytes(variant)
+        place[point], place[point + 1] = given[0], given[1]
 
 
 @njit(nogil=True, error_model="numpy")

@@ -131,6 +131,24 @@ def test_analysis(splitting, monkeypatch, dtype, geometry):
 
 
 @pytest.mark.parametrize("dtype", BOUND)
+@pytest.mark.parametrize("geometry", [(256, 256), (512, 384)])
+def test_real_samples(splitting, dtype, geometry):
+    spec = analysis_spec(*geometry, dtype, real=True, turn=Fraction(0))
+    samples = noise((1, FRAMES * spec.hop + 7), dtype).real.copy()
+    engine = NumbaAnalysisEngine(spec)
+    assert engine.layout.radix == RADIX[dtype]
+    frames = analyse(engine, samples)
+    plain = analyse(NumpyAnalysisEngine(spec), samples)
+    scale = np.sum(np.abs(spec.taps)) * np.abs(samples).max()
+    assert np.abs(frames - plain).max() <= 2 * BOUND[dtype] * scale
+    chosen = np.array([3, 0, spec.channels // 2, 8, 9])
+    for changes in ({"channel_major": True}, {"columns": chosen}):
+        other = analysis_spec(*geometry, dtype, real=True, turn=Fraction(0), **changes)
+        again = analyse(NumbaAnalysisEngine(other), samples, cut=1234)
+        assert np.array_equal(again, frames if other.columns is None else frames[..., chosen])
+
+
+@pytest.mark.parametrize("dtype", BOUND)
 @pytest.mark.parametrize("geometry", GEOMETRIES)
 def test_synthesis(splitting, dtype, geometry):
     spec = synthesis_spec(*geometry, dtype)

@@ -32,10 +32,10 @@ def splitting(monkeypatch):
         monkeypatch.setattr(module, "slot_frames", lambda channels: 1)
 
 
-def analysis_spec(channels, hop, dtype, **changes):
-    generator = np.random.default_rng(channels)
-    words = {
-        "taps": generator.standard_normal(5 * channels - 3),
+def _words(channels, hop, dtype):
+    """What both specs share: long taps, absolute phase, an offset of a third of a channel."""
+    return {
+        "taps": np.random.default_rng(channels).standard_normal(5 * channels - 3),
         "channels": channels,
         "hop": hop,
         "dtype": np.dtype(dtype),
@@ -46,26 +46,15 @@ def analysis_spec(channels, hop, dtype, **changes):
         "channel_major": False,
         "workers": 1,
     }
-    return AnalysisSpec(**{**words, **changes})
+
+
+def analysis_spec(channels, hop, dtype, **changes):
+    return AnalysisSpec(**{**_words(channels, hop, dtype), **changes})
 
 
 def synthesis_spec(channels, hop, dtype, **changes):
-    generator = np.random.default_rng(channels)
-    words = {
-        "taps": generator.standard_normal(5 * channels - 3),
-        "channels": channels,
-        "hop": hop,
-        "dtype": np.dtype(dtype),
-        "real": False,
-        "rotate": True,
-        "turn": Fraction(1, 3 * channels),
-        "delay": 5 * channels - 4,
-        "columns": None,
-        "column_weights": None,
-        "channel_major": False,
-        "workers": 1,
-    }
-    return SynthesisSpec(**{**words, **changes})
+    words = {"delay": 5 * channels - 4, "column_weights": None}
+    return SynthesisSpec(**{**_words(channels, hop, dtype), **words, **changes})
 
 
 def noise(shape, dtype):

@@ -169,7 +169,7 @@ def fold_block(variant, bank, table, first, count):
                     bank.folded + frame * bank.folded_stride + offset,
                     bank.piece_stride,
                     bank.factors + offset,
-                    bank.factor_stride,
+                    bank.piece_stride,
                     vectors,
                 )
 

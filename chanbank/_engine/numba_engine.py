@@ -307,7 +307,6 @@ class _Worker:
             "strip_stride": strip_stride,
             "piece_stride": layout.piece_stride,
             "factors": address_or_zero(layout.factors),
-            "factor_stride": layout.piece_stride,
             "halves": address_or_zero(self.halves),
             "line": address_or_zero(self.line),
             "real_factors": address_or_zero(layout.real_factors),

@@ -248,7 +248,6 @@ class _Worker:
             "summed_stride": layout.summed_stride,
             "piece_stride": layout.piece_stride,
             "factors": address_or_zero(layout.factors),
-            "factor_stride": layout.piece_stride,
             "execute": layout.plan.execute,
             "plan": layout.plan.address,
             "mix_table": address_or_zero(layout.mixer),

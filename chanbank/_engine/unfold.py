@@ -40,12 +40,12 @@ __all__ = ["SYNTHESIS", "synthesis_run"]
 #   columns: the bytes from the start of a given row to each of the frame's DFT points (0: all)
 #   weights: a factor for each place of a given row (0: none)
 #   given, made: rows before and behind the DFT; summed: samples before they are delivered
-#   piece_stride, factors: of DFTs that are split
+#   piece_stride, factors: of DFTs that are split (both in rows of that stride)
 #   mix, hop: the turn back per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 SYNTHESIS = record(
     "channels hop rows cycle ring_rows block gather slot held rotate channel_major real_part"
     " delay column_count columns weights taps tap_stride given given_stride made made_stride"
-    " row_stride summed summed_stride piece_stride factors factor_stride execute plan"
+    " row_stride summed summed_stride piece_stride factors execute plan"
     " mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,
@@ -169,7 +169,7 @@ def _join(variant, bank, row):
         bank.made,
         bank.piece_stride,
         bank.factors,
-        bank.factor_stride,
+        bank.piece_stride,
         row,
         size,
         size // VECTOR_BYTES,

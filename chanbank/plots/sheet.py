@@ -95,6 +95,7 @@ def summary_sheet(report, path=None, *, title="", overwrite=False):
         plot_leakage(report, ax=right)
         (plot_error if report.system is None else plot_distortion)(report, ax=rows[3].subplots())
         _write_table(rows[4].subplots(), report)
+        _settle(page, rows)
     if path is not None:
         kind = ending[1:]
         # Neither file carries the time it was made: the same report gives the same bytes.
@@ -102,6 +103,17 @@ def summary_sheet(report, path=None, *, title="", overwrite=False):
         with style_context(), whole_file(path, overwrite=overwrite) as file:
             page.savefig(file, format=kind, metadata=metadata)
     return page
+
+
+def _settle(page, rows):
+    """Fix the layout, in round numbers: its solver's last digits differ from call to call."""
+    page.draw_without_rendering()
+    page.set_layout_engine("none")
+    for row in rows:
+        box = row.bbox_relative
+        box.p0, box.p1 = box.p0.round(6), box.p1.round(6)
+    for ax in page.axes:
+        ax.set_position([round(number, 6) for number in ax.get_position().bounds])
 
 
 def _write_table(ax, report):

@@ -10,11 +10,11 @@ from functools import cache
 from pathlib import Path
 
 import numpy as np
-from numba import carray, from_dtype, njit, types
+from numba import carray, from_dtype, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
-from chanbank._engine.compiling import compiled
+from chanbank._engine.compiling import compiled, kernel
 from chanbank._engine.fold import fold_block
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
@@ -26,10 +26,16 @@ from chanbank._engine.lanes import (
     make_variant,
     pieces_of,
 )
-from chanbank._engine.move import copy_bytes, copy_columns, transpose_frames, transpose_strips
+from chanbank._engine.move import (
+    copy_bytes,
+    copy_columns,
+    fetch_lines,
+    transpose_frames,
+    transpose_strips,
+)
 from chanbank._engine.phase import exact_phase, rotate_row, turn_row
 from chanbank._engine.radix import real_spectrum
-from chanbank._engine.stage import stage_run
+from chanbank._engine.stage import NUMBER_BYTES, stage_run
 
 __all__ = ["ANALYSIS", "analysis_run", "execute_plan", "record", "source_digest"]
 
@@ -89,12 +95,12 @@ def _bank_at(typingctx, address):
     return kind(types.int64), codegen
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _word_at(address):
     return carray(address_as_pointer(address), (1,), np.int64)[0]
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _stage(variant, bank, table, samples, begin, end):
     """Samples begin .. end - 1 (absolute) of a push into the ring.
 
@@ -108,15 +114,16 @@ def _stage(variant, bank, table, samples, begin, end):
     sample_bytes = bank.held * lane_bytes(variant)
     mixer = (bank.mix_high, bank.mix_low, bank.mix_table)
     rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
+    row = begin // bank.channels
+    column = begin - row * bank.channels
+    place = row % bank.ring_rows
     time = begin
     while time < end:
-        row = time // bank.channels
-        column = time - row * bank.channels
         count = min(bank.channels - column, end - time)
         stage_run(
             variant,
             code,
-            rows[row % bank.ring_rows] + column * sample_bytes,
+            rows[place] + column * sample_bytes,
             source,
             time - origin,
             count,
@@ -127,18 +134,32 @@ def _stage(variant, bank, table, samples, begin, end):
             mixer,
             time,
         )
+        column = 0
+        place = place + 1 if place + 1 < bank.ring_rows else 0
         time += count
 
 
-@njit(nogil=True, error_model="numpy")
-def _transform(variant, bank, first, start, count, bins):
+@kernel
+def _to_come(samples, time, end):
+    """The bytes of samples time .. end - 1 of a push: (address of the first, address behind)."""
+    code, given, source, origin, _, _ = samples
+    size = given * NUMBER_BYTES[code]
+    return source + (time - origin) * size, source + (end - origin) * size
+
+
+@kernel
+def _transform(variant, bank, first, start, count, bins, ahead):
     """DFTs to `bins` of `count` folded frames from row `start` of the block that starts at `first`.
 
     The plan always runs on a whole slot: one plan for every frame keeps the bits independent of
-    how many frames a push completes.
+    how many frames a push completes. `ahead` is (place, end) of what the next block will read:
+    between the slots some of it is fetched. Returns how far that has come.
     """
+    place, end = ahead
     for slot in range(start, start + count, bank.slot):
+        place = fetch_lines(place, end)
         source = bank.folded + slot * bank.folded_stride
+        target = bins + (slot - start) * bank.bins_stride
         if bank.turned != 0:
             for index in range(slot, min(slot + bank.slot, start + count)):
                 frame = first + index
@@ -153,12 +174,14 @@ def _transform(variant, bank, first, start, count, bins):
             source = bank.turned
         if is_real(variant) and pieces_of(variant) > 1:  # a slot is one frame then
             execute_plan(bank.execute, bank.plan, source, bank.halves)
-            _real_row(variant, bank, bins + (slot - start) * bank.bins_stride)
-            continue
-        execute_plan(bank.execute, bank.plan, source, bins + (slot - start) * bank.bins_stride)
+            _real_row(variant, bank, target)
+        else:
+            execute_plan(bank.execute, bank.plan, source, target)
+        place = fetch_lines(place, end)
+    return place
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _real_row(variant, bank, target):
     """The spectrum of a row of real samples from the pieces that the split DFT left."""
     pieces, size = pieces_of(variant), 2 * lane_bytes(variant)
@@ -178,7 +201,7 @@ def _real_row(variant, bank, target):
     real_spectrum(variant, bank.line, bank.real_factors, target, points)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _deliver(variant, bank, result, index, count):
     """`count` transformed frames to the result, the first of them its frame `index`.
 
@@ -282,12 +305,13 @@ def analysis_run(lane, real, step, radix):
             newest = (frame + count - 1) * bank.hop + 1
             _stage(variant, bank, table, samples, time, newest)
             time = newest
+            place, stop = _to_come(samples, time, min(end, time + bank.block * bank.hop))
             fold_block(variant, bank, table, frame, count)
             part = min(bank.gather, bank.block)
             for start in range(0, count, part):
                 size = min(part, count - start)
                 bins = bank.bins + waiting * bank.bins_stride
-                _transform(variant, bank, frame, start, size, bins)
+                place = _transform(variant, bank, frame, start, size, bins, (place, stop))
                 waiting += size
                 done = frame + start + size
                 if waiting == bank.gather or done == last:

@@ -11,10 +11,11 @@ them are folded together, so that a row is loaded once and feeds up to eight sum
 """
 
 import numpy as np
-from numba import njit, types
+from numba import types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
+from chanbank._engine.compiling import kernel
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes, pieces_of
 from chanbank._engine.radix import split_pieces
 
@@ -23,9 +24,10 @@ __all__ = ["fold_block", "fold_rows", "tile_columns"]
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
-# Bytes of a row folded for all frames before going on: the rows' parts and their taps stay in the
-# caches. Rows of long DFTs come from the third level or from memory, which deliver long runs best.
-_TILE_BYTES, _LONG_TILE_BYTES = 1 << 11, 1 << 13
+# Bytes of a row folded for all frames before going on. A row serves up to P frames of every residue:
+# the parts of a block's rows, some tens of them, and their taps stay in the first-level cache. Rows
+# of long DFTs come from the third level or from memory, which deliver long runs best.
+_TILE_BYTES, _LONG_TILE_BYTES = 1 << 9, 1 << 13
 
 
 @intrinsic(prefer_literal=True)
@@ -107,7 +109,7 @@ def _add_chunk(lanes, variant, size, sums, entry, first, here):
         builder.store(value, total)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def fold_rows(variant, rows, taps, out, frames, vectors):
     """Fold `vectors` vectors of columns for `frames` frames that lie `step` rows apart.
 
@@ -136,13 +138,13 @@ def fold_rows(variant, rows, taps, out, frames, vectors):
             frame += 1
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def tile_columns(variant, sample_bytes):
     """Columns folded for all frames before going on."""
     return (_LONG_TILE_BYTES if pieces_of(variant) > 1 else _TILE_BYTES) // sample_bytes
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def fold_block(variant, bank, table, first, count):
     """Fold frames first .. first + count - 1, those that are whole rows apart together.
 
@@ -174,7 +176,7 @@ def fold_block(variant, bank, table, first, count):
                 )
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _fold_tile(variant, bank, table, first, count, start, stop, folded):
     """Columns start .. stop - 1 of `count` frames, to where a row from `folded` on holds them."""
     sample_bytes = bank.held * lane_bytes(variant)

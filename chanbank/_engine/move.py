@@ -7,20 +7,63 @@ ordinary way, since a reader will soon want them.
 
 import numpy as np
 from llvmlite import ir
-from numba import carray, njit, types
+from numba import carray, types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
 from chanbank._engine.buffers import LINE
+from chanbank._engine.compiling import kernel
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, address_as_pointer, lane_bytes
 
-__all__ = ["STRIP_COLUMNS", "copy_bytes", "copy_columns", "transpose_frames", "transpose_strips"]
+__all__ = [
+    "STRIP_COLUMNS",
+    "copy_bytes",
+    "copy_columns",
+    "fetch_lines",
+    "transpose_frames",
+    "transpose_strips",
+]
 
 # Channels transposed into a strip at a time.
 STRIP_COLUMNS = 8
 
 # Vectors in a cache line.
 _A_LINE = LINE // VECTOR_BYTES
+
+
+# Lines asked for at a time. A core keeps some thirty loads from memory under way, and drops or
+# waits for what is asked beyond.
+_BURST = 32
+
+
+@intrinsic
+def _fetch_line(typingctx, address):
+    """Ask for a cache line, to have it in the second level when it is read; any address will do."""
+
+    def codegen(context, builder, signature, args):
+        word = ir.IntType(32)
+        kind = ir.FunctionType(ir.VoidType(), [cgutils.voidptr_t, word, word, word])
+        fetch = cgutils.get_or_insert_function(builder.module, kind, "llvm.prefetch.p0")
+        read, second_level, data = (ir.Constant(word, number) for number in (0, 2, 1))
+        pointer = builder.inttoptr(args[0], cgutils.voidptr_t)
+        builder.call(fetch, [pointer, read, second_level, data])
+        return context.get_dummy_value()
+
+    return types.void(types.int64), codegen
+
+
+@kernel
+def fetch_lines(place, end):
+    """Have the next lines of the bytes place .. end - 1 fetched; returns the first not asked for.
+
+    A loop that does nothing but read from memory waits for it. Called between pieces of work on
+    data in cache, this lets memory deliver while they are done.
+    """
+    stop = min(end, place + _BURST * LINE)
+    while place < stop:
+        _fetch_line(place)
+        place += LINE
+    return place
 
 
 @intrinsic(prefer_literal=True)
@@ -41,7 +84,7 @@ def _copy_whole(typingctx, unit, stream, target, source, count):
     return types.void(unit, stream, types.int64, types.int64, types.int64), codegen
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def copy_bytes(target, source, size, stream):
     """`size` bytes, a multiple of 4 (of 8 if `stream`); `stream` writes past the caches."""
     if stream:
@@ -62,7 +105,7 @@ def copy_bytes(target, source, size, stream):
             _copy_whole(4, False, target + size - 4, source + size - 4, 1)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def copy_columns(variant, target, step, source, columns, count):
     """The chosen DFT points of one frame, `step` bytes apart in the result.
 
@@ -127,7 +170,7 @@ def _exchange(lanes, rows, block):
     return result
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def transpose_frames(variant, target, stride, source, source_stride, frames, columns, stream):
     """Frames in rows to channels in rows `stride` bytes apart; squares of one vector a side."""
     size = 2 * lane_bytes(variant)
@@ -161,7 +204,7 @@ def transpose_frames(variant, target, stride, source, source_stride, frames, col
             _copy_whole(8, False, here, there, size // 8)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def transpose_strips(
     variant, target, stride, source, source_stride, frames, columns, strip, strip_stride
 ):

@@ -37,7 +37,7 @@ class NumbaSynthesisEngine:
     def __init__(self, spec):
         self.spec = spec
         self.layout = layout = _Layout(spec)
-        step = layout.cycle if layout.cycle <= 3 else 0
+        step = layout.cycle if layout.cycle <= 4 else 0
         self.run = synthesis_run(layout.lane, layout.half, step, layout.radix)
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
         self.weights = (None, None)

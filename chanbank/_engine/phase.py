@@ -3,8 +3,9 @@
 import math
 
 import numpy as np
-from numba import carray, njit
+from numba import carray
 
+from chanbank._engine.compiling import kernel
 from chanbank._engine.lanes import address_as_pointer, as_lane, lane_type
 
 __all__ = ["MIX_BLOCK", "exact_phase", "mix", "rotate_row", "turn_row"]
@@ -15,7 +16,7 @@ MIX_BLOCK = 1024
 _TURN = 2 * math.pi / 2.0**64
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def exact_phase(high, low, time):
     """2 pi frac(turn * time) as an angle in -pi .. pi, the turn given in units of 2**-128.
 
@@ -36,7 +37,7 @@ def exact_phase(high, low, time):
     return np.int64(high * t + carried) * _TURN
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def mix(variant, target, time, count, high, low, table):
     """x[t] *= exp(-2j pi turn t) in place, for `count` complex samples from absolute `time` on.
 
@@ -63,7 +64,7 @@ def mix(variant, target, time, count, high, low, table):
         done += size
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def rotate_row(variant, target, source, first, count):
     """target[i] = source[(i + first) % count], in floats."""
     place = carray(address_as_pointer(target), (count,), lane_type(variant))
@@ -76,7 +77,7 @@ def rotate_row(variant, target, source, first, count):
         rest[i] = tail[i]
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def turn_row(variant, row, count, angle):
     """A row of `count` complex numbers times exp(1j angle), in place."""
     place = carray(address_as_pointer(row), (2 * count,), lane_type(variant))

@@ -5,8 +5,9 @@ leaves it where the fold finds it in cache. Everything after it knows one sample
 """
 
 import numpy as np
-from numba import carray, njit
+from numba import carray
 
+from chanbank._engine.compiling import kernel
 from chanbank._engine.lanes import address_as_pointer, as_lane, lane_bytes, lane_type
 from chanbank._engine.move import copy_bytes
 from chanbank._engine.phase import mix
@@ -29,7 +30,7 @@ FORMATS = {
 NUMBER_BYTES = (0, 4, 8, 4, 8, 1, 1, 2)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _floats(variant, kind, target, source, count, spread):
     """`count` floats into every `spread`-th place (2: real samples as complex ones)."""
     place = carray(address_as_pointer(target), (count * spread,), lane_type(variant))
@@ -43,7 +44,7 @@ def _floats(variant, kind, target, source, count, spread):
             place[2 * i + 1] = as_lane(variant, 0)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _integers(variant, kind, target, source, count, spread, zero, scale):
     """Like `_floats` for integers, which become (value - zero) * scale."""
     place = carray(address_as_pointer(target), (count * spread,), lane_type(variant))
@@ -58,7 +59,7 @@ def _integers(variant, kind, target, source, count, spread, zero, scale):
             place[2 * i + 1] = as_lane(variant, 0)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _convert(variant, code, target, source, count, spread, zero, scale):
     """`count` numbers of the dtype that `code` names."""
     if code == 0:
@@ -77,7 +78,7 @@ def _convert(variant, code, target, source, count, spread, zero, scale):
         _integers(variant, np.int16, target, source, count, spread, zero, scale)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def stage_run(variant, code, target, source, start, count, given, held, zero, scale, mixer, time):
     """Samples start .. start + count - 1 of `source` to `target`, within one row.
 

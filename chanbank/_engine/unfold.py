@@ -13,10 +13,10 @@ is turned once, when it enters the ring.
 from functools import cache
 
 import numpy as np
-from numba import carray, from_dtype, njit, types
+from numba import carray, from_dtype, types
 from numba.extending import intrinsic
 
-from chanbank._engine.compiling import compiled
+from chanbank._engine.compiling import compiled, kernel
 from chanbank._engine.driver import execute_plan, record, source_digest
 from chanbank._engine.fold import fold_rows, tile_columns
 from chanbank._engine.lanes import (
@@ -28,7 +28,7 @@ from chanbank._engine.lanes import (
     make_variant,
     pieces_of,
 )
-from chanbank._engine.move import copy_bytes, transpose_frames
+from chanbank._engine.move import copy_bytes, fetch_lines, transpose_frames
 from chanbank._engine.phase import exact_phase, mix, rotate_row, turn_row
 from chanbank._engine.radix import join_pieces
 
@@ -65,7 +65,7 @@ def _bank_at(typingctx, address):
     return kind(types.int64), codegen
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _take(variant, bank, source, stride, count):
     """`count` frames from the caller's array to the rows that the DFT reads."""
     size = 2 * lane_bytes(variant)
@@ -99,7 +99,7 @@ def _take(variant, bank, source, stride, count):
             _weigh(variant, row, bank.weights, bank.given_stride // size)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _scatter(variant, bank, row, source, step):
     """A frame's columns to their DFT points, all other points zero."""
     floats = bank.given_stride // lane_bytes(variant)
@@ -113,7 +113,7 @@ def _scatter(variant, bank, row, source, step):
         place[point], place[point + 1] = given[0], given[1]
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _weigh(variant, row, weights, count):
     """A row times a complex factor for each of its `count` places, in place."""
     place = carray(address_as_pointer(row), (2 * count,), lane_type(variant))
@@ -125,18 +125,21 @@ def _weigh(variant, row, weights, count):
         place[2 * i + 1] = x * s + y * c
 
 
-@njit(nogil=True, error_model="numpy")
-def _transform(variant, bank, table, first, count):
+@kernel
+def _transform(variant, bank, table, first, count, ahead):
     """Inverse DFTs of `count` given frames, the first of them frame `first`, into the ring.
 
     Straight into it where rows stay as they are and a slot does not wrap; the ring has room for
-    what the plan writes beyond the last frame.
+    what the plan writes beyond the last frame. `ahead` is (place, end) of what is still to be
+    taken in, and is fetched meanwhile.
     """
+    place_ahead, end_ahead = ahead
     rows = carray(address_as_pointer(table), (bank.ring_rows,), np.int64)
     floats = bank.channels * bank.held
     for slot in range(0, count, bank.slot):
         place = (first + slot) % bank.ring_rows
         given = bank.given + slot * bank.given_stride
+        place_ahead = fetch_lines(place_ahead, end_ahead)
         if pieces_of(variant) > 1:  # a slot is one frame then, and rows stay as they are
             execute_plan(bank.execute, bank.plan, given, bank.made)
             _join(variant, bank, rows[place])
@@ -144,6 +147,7 @@ def _transform(variant, bank, table, first, count):
         straight = bank.rotate != 0 and place + bank.slot <= bank.ring_rows
         target = rows[place] if straight else bank.made
         execute_plan(bank.execute, bank.plan, given, target)
+        place_ahead = fetch_lines(place_ahead, end_ahead)
         if straight:
             continue
         for index in range(min(bank.slot, count - slot)):
@@ -160,7 +164,7 @@ def _transform(variant, bank, table, first, count):
                 turn_row(variant, row, bank.channels, angle)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _join(variant, bank, row):
     """The last step of a split DFT, from the pieces' results to a row of the ring."""
     size = bank.channels // pieces_of(variant) * bank.held * lane_bytes(variant)
@@ -176,19 +180,20 @@ def _join(variant, bank, row):
     )
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _unfold(variant, bank, table, first, count):
     """Samples of hops first .. first + count - 1, those whose columns agree together.
 
-    A hop's columns begin at (mD - delay) mod M and may wrap to 0 once: two parts. The first may
-    run over into the second, which is written after it.
+    A hop's columns begin at (mD - delay) mod M and may wrap to 0 once. Rows are read at whole
+    vectors: a hop begins with one vector where its columns do, and goes on aligned; so do tiles.
+    A vector may run over what it is for; what it runs into is written after it, or again, to the
+    same bits.
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
     tile = tile_columns(variant, sample_bytes)
     stride = bank.cycle * bank.summed_stride
     for start in range(0, bank.hop, tile):
-        stop = min(start + tile, bank.hop)
         for member in range(min(bank.cycle, count)):
             hops = (count - member + bank.cycle - 1) // bank.cycle
             newest = first + member
@@ -196,25 +201,27 @@ def _unfold(variant, bank, table, first, count):
             column = (newest * bank.hop - bank.delay) % bank.channels
             split = bank.channels - column
             out = bank.summed + member * bank.summed_stride
-            begin = start
-            for _part in range(2):
-                end = min(stop, split) if begin < split else stop
-                if begin >= end:
-                    continue
+            lead = -column % per_vector
+            begin = start + lead if start > 0 else start
+            stop = min(start + tile + lead, bank.hop)
+            while begin < stop:
                 shift = column if begin < split else column - bank.channels
-                vectors = -(-(end - begin) // per_vector)
+                end = split if begin < split < stop else stop
+                lead = -(begin + shift) % per_vector
+                if lead > 0:
+                    end = min(end, begin + lead)
                 fold_rows(
                     variant,
                     (table, oldest, (begin + shift) * sample_bytes, bank.cycle),
                     (bank.taps + begin * lane_bytes(variant), bank.tap_stride, bank.rows),
                     (out + begin * sample_bytes, stride),
                     hops,
-                    vectors,
+                    -(-(end - begin) // per_vector),
                 )
                 begin = end
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _deliver(variant, bank, target, first, count, stream):
     """`count` hops of samples to the result, mixed back where the grid was shifted."""
     size = bank.hop * bank.held * lane_bytes(variant)
@@ -229,7 +236,7 @@ def _deliver(variant, bank, target, first, count, stream):
             copy_bytes(target + hop * size, row, size, stream)
 
 
-@njit(nogil=True, error_model="numpy")
+@kernel
 def _real_part(variant, target, source, count):
     place = carray(address_as_pointer(target), (count,), lane_type(variant))
     given = carray(address_as_pointer(source), (2 * count,), lane_type(variant))
@@ -260,6 +267,7 @@ def synthesis_run(lane, real, step, radix):
         hop_bytes = bank.hop * lane_bytes(variant)
         if bank.held == 2 and bank.real_part == 0:
             hop_bytes *= 2
+        in_line = bank.channel_major == 0 and bank.columns == 0
         frame = begin
         while frame < last:
             count = min(bank.block, last - frame)
@@ -267,7 +275,9 @@ def synthesis_run(lane, real, step, radix):
                 part = min(bank.gather, count - start)
                 here = source + (frame + start - begin) * apart
                 _take(variant, bank, here, stride, part)
-                _transform(variant, bank, table, frame + start, part)
+                place = here + part * stride
+                stop = source + (last - begin) * stride if in_line else place
+                _transform(variant, bank, table, frame + start, part, (place, stop))
             skip = max(0, first - frame)  # frames that only fill the ring
             if skip < count:
                 _unfold(variant, bank, table, frame + skip, count - skip)

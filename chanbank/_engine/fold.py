@@ -29,6 +29,9 @@ _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 # of long DFTs come from the third level or from memory, which deliver long runs best.
 _TILE_BYTES, _LONG_TILE_BYTES = 1 << 9, 1 << 13
 
+# Rows whose parts in a tile fill most of the first-level cache.
+_NEAR_ROWS = 48
+
 
 @intrinsic(prefer_literal=True)
 def _fold_group(typingctx, variant, together, rows, taps, out, vectors):
@@ -178,47 +181,60 @@ def fold_block(variant, bank, table, first, count):
 
 @kernel
 def _fold_tile(variant, bank, table, first, count, start, stop, folded):
-    """Columns start .. stop - 1 of `count` frames, to where a row from `folded` on holds them."""
+    """Columns start .. stop - 1 of `count` frames, to where a row from `folded` on holds them.
+
+    Some frames of every residue at a time, so that the rows they share are in the first level.
+    """
+    newest = first * bank.hop
+    row = newest // bank.channels
+    split = newest - row * bank.channels + 1
+    oldest = (row - bank.rows) % bank.ring_rows
+    together = max(8, (_NEAR_ROWS - bank.rows) // bank.step // 8 * 8)
+    for begin in range(0, count, together * bank.cycle):
+        for member in range(min(bank.cycle, count - begin)):
+            frames = min(together, -(-(count - begin - member) // bank.cycle))
+            place = folded + (begin + member) * bank.folded_stride
+            _fold_frames(variant, bank, table, (oldest, split), (start, stop), place, frames)
+            split += bank.hop
+            while split > bank.channels:
+                split -= bank.channels
+                oldest = oldest + 1 if oldest + 1 < bank.ring_rows else 0
+        oldest = (oldest + (together - 1) * bank.step) % bank.ring_rows
+
+
+@kernel
+def _fold_frames(variant, bank, table, position, columns, place, frames):
+    """Some columns of `frames` frames of one residue, the first of them at `place`.
+
+    Columns before the split, then those behind it, which belong to one row earlier. The last vector
+    of the first part may run over the split; the second part starts with a vector at the split
+    itself and goes on aligned. Overlapping columns are computed twice, to the same bits.
+    """
+    oldest, split = position
+    start, stop = columns
     sample_bytes = bank.held * lane_bytes(variant)
-    tap_bytes = lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    for member in range(min(bank.cycle, count)):
-        frames = (count - member + bank.cycle - 1) // bank.cycle
-        newest = (first + member) * bank.hop
-        row = newest // bank.channels
-        split = newest - row * bank.channels + 1
-        place = folded + member * bank.folded_stride
-        stride = bank.cycle * bank.folded_stride
-        # Columns before the split, then those behind it, which belong to one row earlier. The
-        # last vector of the first part may run over the split; the second part starts with a
-        # vector at the split itself and goes on aligned. Overlapping columns are computed
-        # twice, to the same bits.
-        if split < stop:
-            aligned = -(-split // per_vector) * per_vector
-        else:
-            aligned = stop
-        for part in range(3):
-            if part == 0:
-                column, end = start, min(split, stop)
-                taps = bank.channels - split + column
-            elif part == 1:
-                column, end = split, min(split + 1, aligned)
-                if split < start:
-                    continue
-                taps = np.int64(0)
-            else:
-                column, end = max(start, aligned), stop
-                taps = column - split
-            if column >= end:
+    aligned = -(-split // per_vector) * per_vector if split < stop else stop
+    for part in range(3):
+        if part == 0:
+            column, end = start, min(split, stop)
+            taps = bank.channels - split + column
+        elif part == 1:
+            column, end = split, min(split + 1, aligned)
+            if split < start:
                 continue
-            oldest = (row - bank.rows + (1 if part == 0 else 0)) % bank.ring_rows
-            vectors = -(-(end - column) // per_vector)
-            offset = column * sample_bytes
-            fold_rows(
-                variant,
-                (table, oldest, offset, bank.step),
-                (bank.taps + taps * tap_bytes, bank.tap_stride, bank.rows),
-                (place + offset, stride),
-                frames,
-                vectors,
-            )
+            taps = np.int64(0)
+        else:
+            column, end = max(start, aligned), stop
+            taps = column - split
+        if column >= end:
+            continue
+        offset = column * sample_bytes
+        fold_rows(
+            variant,
+            (table, oldest + 1 if part == 0 else oldest, offset, bank.step),
+            (bank.taps + taps * lane_bytes(variant), bank.tap_stride, bank.rows),
+            (place + offset, bank.cycle * bank.folded_stride),
+            frames,
+            -(-(end - column) // per_vector),
+        )

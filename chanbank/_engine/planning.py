@@ -1,11 +1,12 @@
 """The one place that decides how hard FFTW plans, and keeps what it learned (its wisdom).
 
-Plans are made when a bank is built, never in the middle of a stream. Up to 2**16 points FFTW
-measures, within a time limit; the wisdom goes to the user's cache folder, so that the next process
-plans at once and gets the same plans (and so the same bits). Two environment variables change this:
-CHANBANK_CACHE names another folder, or "off"; CHANBANK_PLANNING=patient lets FFTW search as long
-as it likes: seconds, up to a minute for long transforms that are not split (real samples, frame
-phase), which may become a fifth faster, in later processes too.
+Plans are made when a bank is built, never in the middle of a stream. Up to 2**6 points FFTW tries
+all it knows, up to 2**16 points it measures, within a time limit; the wisdom goes to the user's
+cache folder, so that the next process plans at once and gets the same plans (and so the same bits).
+Two environment variables change this: CHANBANK_CACHE names another folder, or "off";
+CHANBANK_PLANNING=patient lets FFTW search as long as it likes: seconds, up to a minute for long
+transforms that are not split (real samples, frame phase), which may become a fifth faster, in later
+processes too.
 """
 
 import contextlib
@@ -20,7 +21,8 @@ import pyfftw
 
 __all__ = ["effort", "planning"]
 
-# Longer transforms take many seconds to measure.
+# Short transforms are searched for in a blink. Longer ones take many seconds to measure.
+_PATIENT_LIMIT = 1 << 6
 _MEASURE_LIMIT = 1 << 16
 
 # Seconds that one plan may take; awkward lengths (large primes) would take far more.
@@ -34,6 +36,8 @@ def effort(points):
     """How hard to plan a transform of that many points: FFTW's flag, and seconds or None."""
     if os.environ.get("CHANBANK_PLANNING", "") == "patient":
         return "FFTW_PATIENT", None
+    if points <= _PATIENT_LIMIT:
+        return "FFTW_PATIENT", _TIME_LIMIT
     return "FFTW_MEASURE" if points <= _MEASURE_LIMIT else "FFTW_ESTIMATE", _TIME_LIMIT
 
 

@@ -25,6 +25,7 @@ from chanbank._engine.lanes import (
     lane_type,
     make_variant,
     pieces_of,
+    plain,
 )
 from chanbank._engine.move import (
     copy_bytes,
@@ -167,10 +168,10 @@ def _transform(variant, bank, first, start, count, bins, ahead):
                 here = bank.folded + index * bank.folded_stride
                 origin = (frame * bank.hop) % bank.channels
                 count_floats = bank.channels * bank.held
-                rotate_row(variant, row, here, origin * bank.held, count_floats)
+                rotate_row(plain(variant), row, here, origin * bank.held, count_floats)
                 if bank.mix_table != 0:
                     angle = exact_phase(bank.hop_high, bank.hop_low, frame)
-                    turn_row(variant, row, bank.channels, angle)
+                    turn_row(plain(variant), row, bank.channels, angle)
             source = bank.turned
         if is_real(variant) and pieces_of(variant) > 1:  # a slot is one frame then
             execute_plan(bank.execute, bank.plan, source, bank.halves)
@@ -187,7 +188,7 @@ def _real_row(variant, bank, target):
     pieces, size = pieces_of(variant), 2 * lane_bytes(variant)
     points = bank.channels // 2
     transpose_frames(
-        variant,
+        plain(variant),
         bank.line,
         pieces * size,
         bank.halves,
@@ -214,7 +215,7 @@ def _deliver(variant, bank, result, index, count):
     if bank.columns != 0:
         for frame in range(count):
             copy_columns(
-                variant,
+                plain(variant),
                 target + frame * frame_stride,
                 column_stride,
                 bank.bins + frame * bank.bins_stride,
@@ -230,13 +231,15 @@ def _deliver(variant, bank, result, index, count):
             rows = bank.bins_stride
             if stream != 0:
                 strip, wide = bank.strip, bank.strip_stride
-                transpose_strips(variant, here, apart, source, rows, count, length, strip, wide)
+                transpose_strips(
+                    plain(variant), here, apart, source, rows, count, length, strip, wide
+                )
             else:
-                transpose_frames(variant, here, apart, source, rows, count, length, False)
+                transpose_frames(plain(variant), here, apart, source, rows, count, length, False)
     elif pieces > 1:
         for frame in range(count):
             transpose_frames(
-                variant,
+                plain(variant),
                 target + frame * frame_stride,
                 pieces * column_stride,
                 bank.bins + frame * bank.bins_stride,
@@ -303,7 +306,7 @@ def analysis_run(lane, real, step, radix):
         while frame < last:
             count = min(bank.block, last - frame)
             newest = (frame + count - 1) * bank.hop + 1
-            _stage(variant, bank, table, samples, time, newest)
+            _stage(plain(variant), bank, table, samples, time, newest)
             time = newest
             place, stop = _to_come(samples, time, min(end, time + bank.block * bank.hop))
             fold_block(variant, bank, table, frame, count)
@@ -318,7 +321,7 @@ def analysis_run(lane, real, step, radix):
                     _deliver(variant, bank, result, done - waiting - first, waiting)
                     waiting = 0
             frame += count
-        _stage(variant, bank, table, samples, time, end)
+        _stage(plain(variant), bank, table, samples, time, end)
         if stream != 0:
             fence()
         return sources

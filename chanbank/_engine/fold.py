@@ -156,9 +156,10 @@ def fold_block(variant, bank, table, first, count):
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = tile_columns(variant, sample_bytes)
     pieces = pieces_of(variant)
     length = bank.channels // pieces
+    shared = count > bank.cycle or pieces > 1  # else each row is read once for all
+    tile = tile_columns(variant, sample_bytes) if shared else length
     for start in range(0, length, tile):
         stop = min(start + tile, length)
         for piece in range(pieces):

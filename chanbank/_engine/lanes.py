@@ -28,6 +28,7 @@ __all__ = [
     "lane_type",
     "make_variant",
     "pieces_of",
+    "plain",
 ]
 
 INDEX = ir.IntType(64)
@@ -76,6 +77,19 @@ def make_variant(typingctx, lane, real, step, radix):
         return context.get_dummy_value()
 
     return variant(lane, real, step, radix), codegen
+
+
+@intrinsic
+def plain(typingctx, variant):
+    """The variant that says no more than the size of a float.
+
+    Kernels that need no more are given this one: compiled once, they serve all variants.
+    """
+
+    def codegen(context, builder, signature, args):
+        return context.get_dummy_value()
+
+    return Variant(variant.lane, False, 0, 1)(variant), codegen
 
 
 @intrinsic

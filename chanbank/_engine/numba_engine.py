@@ -44,6 +44,7 @@ class NumbaAnalysisEngine:
         self.run = analysis_run(layout.lane, not layout.paired, step, layout.radix)
         self.forms = _forms(spec.real)
         self.alone = spec.workers < 2
+        self.channel_major = spec.channel_major
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
         self.reset(0, 1)
 
@@ -116,7 +117,7 @@ class NumbaAnalysisEngine:
         """One compiled call: samples and frames `part`, some bytes into the push's arrays."""
         code, given, samples, zero, scale = form
         frame_stride, column_stride = out.strides[-2:]
-        if self.spec.channel_major:
+        if self.channel_major:
             frame_stride, column_stride = column_stride, frame_stride
         self.run(
             worker.address,

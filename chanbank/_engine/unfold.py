@@ -27,6 +27,7 @@ from chanbank._engine.lanes import (
     lane_type,
     make_variant,
     pieces_of,
+    plain,
 )
 from chanbank._engine.move import copy_bytes, fetch_lines, transpose_frames
 from chanbank._engine.phase import exact_phase, mix, rotate_row, turn_row
@@ -74,7 +75,7 @@ def _take(variant, bank, source, stride, count):
     if bank.channel_major != 0 and bank.columns == 0:
         for piece in range(pieces):
             transpose_frames(
-                variant,
+                plain(variant),
                 bank.given + piece * bank.piece_stride,
                 bank.given_stride,
                 source + piece * stride,
@@ -88,15 +89,17 @@ def _take(variant, bank, source, stride, count):
         if bank.columns != 0:
             column_step = stride if bank.channel_major != 0 else size
             here = source + frame * (size if bank.channel_major != 0 else stride)
-            _scatter(variant, bank, row, here, column_step)
+            _scatter(plain(variant), bank, row, here, column_step)
         elif bank.channel_major == 0 and pieces > 1:
             here = source + frame * stride
             step = pieces * size
-            transpose_frames(variant, row, bank.piece_stride, here, step, length, pieces, False)
+            transpose_frames(
+                plain(variant), row, bank.piece_stride, here, step, length, pieces, False
+            )
         elif bank.channel_major == 0:
             copy_bytes(row, source + frame * stride, bank.column_count * size, False)
         if bank.weights != 0:
-            _weigh(variant, row, bank.weights, bank.given_stride // size)
+            _weigh(plain(variant), row, bank.weights, bank.given_stride // size)
 
 
 @kernel
@@ -158,10 +161,10 @@ def _transform(variant, bank, table, first, count, ahead):
                 copy_bytes(row, source, floats * lane_bytes(variant), False)
                 continue
             start = (-frame * bank.hop) % bank.channels
-            rotate_row(variant, row, source, start * bank.held, floats)
+            rotate_row(plain(variant), row, source, start * bank.held, floats)
             if bank.mix_table != 0:
                 angle = exact_phase(bank.hop_high, bank.hop_low, frame)
-                turn_row(variant, row, bank.channels, angle)
+                turn_row(plain(variant), row, bank.channels, angle)
 
 
 @kernel
@@ -229,9 +232,9 @@ def _deliver(variant, bank, target, first, count, stream):
         row = bank.summed + hop * bank.summed_stride
         if bank.mix_table != 0:
             time = (first + hop) * bank.hop - bank.delay
-            mix(variant, row, time, bank.hop, bank.mix_high, bank.mix_low, bank.mix_table)
+            mix(plain(variant), row, time, bank.hop, bank.mix_high, bank.mix_low, bank.mix_table)
         if bank.real_part != 0:
-            _real_part(variant, target + hop * size // 2, row, bank.hop)
+            _real_part(plain(variant), target + hop * size // 2, row, bank.hop)
         else:
             copy_bytes(target + hop * size, row, size, stream)
 

@@ -257,7 +257,7 @@ class AnalysisBank(Bank):
         --------
         See the class.
         """
-        samples, count, lead = self._checked_samples(samples)
+        samples, count, lead, scaling = self._checked_samples(samples)
         total = count + self.prototype.length - 1
         shape = self._shape(lead, -(-total // self.plan.hop))
         out = checked_out(out, shape, self.dtype)
@@ -265,7 +265,7 @@ class AnalysisBank(Bank):
             self._whole = make_analysis_engine(self._spec)
         self._whole.reset(0, math.prod(lead))
         frames = -(-count // self.plan.hop)
-        self._run(self._whole.push, samples, self._part(out, 0, frames))
+        self._run(self._whole, samples, scaling, self._part(out, 0, frames))
         self._whole.push_zeros(total - count, flat_leading(self._part(out, frames, None), 2))
         return out
 
@@ -303,12 +303,15 @@ class AnalysisBank(Bank):
         >>> [len(bank.push(np.ones(n, "float32"))) for n in (1, 3, 4)], len(bank.finish())
         ([1, 0, 1], 2)
         """
-        self._refuse_finished()
-        samples, count, lead = self._checked_samples(samples)
-        self._refuse_other_lead("samples", lead)
+        if self._finished:
+            self._refuse_finished()
+        samples, count, lead, scaling = self._checked_samples(samples)
+        if lead != self._lead:
+            self._refuse_other_lead("samples", lead)
         out = checked_out(out, self._shape(lead, self._frames_for(count)), self._spec.dtype)
-        self._accept_lead(lead)
-        self._run(self._engine.push, samples, out)
+        if self._lead is None:
+            self._accept_lead(lead)
+        self._run(self._engine, samples, scaling, out)
         return out
 
     @checked(out=_OUT, call=False)
@@ -476,10 +479,9 @@ class AnalysisBank(Bank):
         return out
 
     def _accept_lead(self, lead):
-        if self._lead is None:
-            self._lead = lead
-            # Zeros skipped before the first samples leave no history behind.
-            self._engine.reset(self._engine.position, math.prod(lead))
+        self._lead = lead
+        # Zeros skipped before the first samples leave no history behind.
+        self._engine.reset(self._engine.position, math.prod(lead))
 
     def _shape(self, lead, frames):
         columns = self._columns
@@ -490,20 +492,20 @@ class AnalysisBank(Bank):
     def _part(self, out, start, stop):
         return out[..., start:stop] if self._spec.channel_major else out[..., start:stop, :]
 
-    def _run(self, push, samples, out):
+    def _run(self, engine, samples, scaling, out):
         if samples.ndim > 1:
             samples, out = flat_leading(samples, 1), flat_leading(out, 2)
-        if samples.dtype in self._floats:
-            push(samples, out)
-        else:
-            push(samples, out, *self._integers[samples.dtype])
+        engine.push(samples, out, *scaling)
 
     def _checked_samples(self, samples):
-        """The samples as the engine takes them, how many there are, and their leading axes."""
+        """The samples as the engine takes them, how many, their leading axes, and their scaling.
+
+        The scaling is () for floats and (zero level, scale) for integers.
+        """
         array = samples if type(samples) is np.ndarray else np.asarray(samples)
-        kind = array.dtype
-        if kind in self._floats and array.ndim and array.flags.c_contiguous:
-            return array, array.shape[-1], array.shape[:-1]
+        kind, shape = array.dtype, array.shape
+        if kind in self._floats and shape and array.flags.c_contiguous:
+            return array, shape[-1], shape[:-1], ()
         if array.ndim == 0 and kind.kind in "iufc":
             raise wrong_value("samples", "an array whose last axis is time", samples)
         if kind not in self._floats:
@@ -519,10 +521,10 @@ class AnalysisBank(Bank):
                 array = array.astype("float32" if wider == np.float16 else wider)
         if not array.flags.c_contiguous:
             array = np.ascontiguousarray(array)
-        count = array.shape[-1]
-        if not self._spec.real and array.dtype in self._integers:
+        count, scaling = array.shape[-1], self._integers.get(array.dtype, ())
+        if scaling and not self._spec.real:
             count //= 2
-        return array, count, array.shape[:-1]
+        return array, count, array.shape[:-1], scaling
 
     def _check_float(self, array):
         kind, name = array.dtype.kind, array.dtype.name

@@ -24,9 +24,9 @@ __all__ = ["fold_block", "fold_rows", "tile_columns"]
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 
-# Bytes of a row folded for all frames before going on. A row serves up to P frames of every residue:
-# the parts of a block's rows, some tens of them, and their taps stay in the first-level cache. Rows
-# of long DFTs come from the third level or from memory, which deliver long runs best.
+# Bytes of a row folded for all frames before going on. A row serves up to P frames of every
+# residue: the parts of a block's rows, some tens of them, and their taps stay in the first-level
+# cache. Rows of long DFTs come from the third level or from memory, which deliver long runs best.
 _TILE_BYTES, _LONG_TILE_BYTES = 1 << 9, 1 << 13
 
 # Rows whose parts in a tile fill most of the first-level cache.

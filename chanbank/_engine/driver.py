@@ -309,7 +309,7 @@ def analysis_run(lane, real, step, radix):
             _stage(plain(variant), bank, table, samples, time, newest)
             time = newest
             place, stop = _to_come(samples, time, min(end, time + bank.block * bank.hop))
-            fold_block(variant, bank, table, frame, count)
+            place = fold_block(variant, bank, table, frame, count, (place, stop))
             part = min(bank.gather, bank.block)
             for start in range(0, count, part):
                 size = min(part, count - start)

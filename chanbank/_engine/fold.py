@@ -17,6 +17,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.compiling import kernel
 from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes, pieces_of
+from chanbank._engine.move import fetch_lines
 from chanbank._engine.radix import split_pieces
 
 __all__ = ["fold_block", "fold_rows", "tile_columns"]
@@ -148,11 +149,12 @@ def tile_columns(variant, sample_bytes):
 
 
 @kernel
-def fold_block(variant, bank, table, first, count):
+def fold_block(variant, bank, table, first, count, ahead):
     """Fold frames first .. first + count - 1, those that are whole rows apart together.
 
     Where long DFTs are split, a tile goes through its columns of all pieces, and then takes the
-    DFTs' first step.
+    DFTs' first step. `ahead` is (place, end) of what the next block will read: some of it is
+    fetched between the tiles. Returns how far that has come.
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
@@ -160,8 +162,10 @@ def fold_block(variant, bank, table, first, count):
     length = bank.channels // pieces
     shared = count > bank.cycle or pieces > 1  # else each row is read once for all
     tile = tile_columns(variant, sample_bytes) if shared else length
+    place_ahead, end_ahead = ahead
     for start in range(0, length, tile):
         stop = min(start + tile, length)
+        place_ahead = fetch_lines(place_ahead, end_ahead)
         for piece in range(pieces):
             here = piece * length
             place = bank.folded + piece * (bank.piece_stride - length * sample_bytes)
@@ -178,6 +182,7 @@ def fold_block(variant, bank, table, first, count):
                     bank.piece_stride,
                     vectors,
                 )
+    return place_ahead
 
 
 @kernel

@@ -30,8 +30,8 @@ _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
 # cache. Rows of long DFTs come from the third level or from memory, which deliver long runs best.
 _TILE_BYTES, _LONG_TILE_BYTES = 1 << 9, 1 << 13
 
-# Rows whose parts in a tile fill most of the first-level cache.
-_NEAR_ROWS = 48
+# Rows whose parts in a tile, with the taps, leave room in the smallest first-level caches.
+_NEAR_ROWS = 32
 
 
 @intrinsic(prefer_literal=True)
@@ -202,7 +202,7 @@ def _fold_tile(variant, bank, table, first, count, start, stop, folded):
             place = folded + (begin + member) * bank.folded_stride
             _fold_frames(variant, bank, table, (oldest, split), (start, stop), place, frames)
             split += bank.hop
-            while split > bank.channels:
+            if split > bank.channels:
                 split -= bank.channels
                 oldest = oldest + 1 if oldest + 1 < bank.ring_rows else 0
         oldest = (oldest + (together - 1) * bank.step) % bank.ring_rows

@@ -112,6 +112,26 @@ def test_any_split_gives_the_same_bits(make, dtype, geometry, real, rotate, kind
     assert same_bits(split_run(engine, spec, samples, cuts, start), whole)
 
 
+@pytest.mark.parametrize("channels, hop", [(64, 64), (64, 48), (64, 32), (256, 192), (96, 95)])
+def test_a_long_push_gives_the_bits_of_single_frames(channels, hop):
+    # Several blocks, of many groups of frames and several tiles; the ring goes round many times.
+    spec = analysis_spec(channels, hop, 5 * channels - 3)
+    samples = samples_of(spec, "float", 500 * hop)
+    whole = split_run(NumbaAnalysisEngine(spec), spec, samples, [], 10**12 + 5)
+    cuts = list(range(hop, 500 * hop, hop))
+    assert same_bits(split_run(NumbaAnalysisEngine(spec), spec, samples, cuts, 10**12 + 5), whole)
+
+
+@pytest.mark.parametrize("channels, hop", [(64, 64), (256, 192), (256, 128), (96, 95)])
+def test_a_long_synthesis_gives_the_bits_of_single_frames(channels, hop):
+    case = (channels, hop, 5 * channels - 3, Fraction(0), "complex64", False, True, False)
+    spec, frames = _synthesis_case(*case)
+    frames = np.concatenate([frames] * 5, axis=1)
+    whole = _synthesise(NumbaSynthesisEngine(spec), spec, frames, [])
+    cuts = list(range(1, frames.shape[1]))
+    assert same_bits(_synthesise(NumbaSynthesisEngine(spec), spec, frames, cuts), whole)
+
+
 @pytest.mark.parametrize("hop", [64, 48, 32, 21])
 @pytest.mark.parametrize("antennas", [1, 2, 3])
 def test_workers_give_the_same_bits(monkeypatch, hop, antennas):

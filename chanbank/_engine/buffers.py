@@ -7,12 +7,12 @@ import numpy as np
 from chanbank._engine.lanes import VECTOR_BYTES
 
 __all__ = [
+    "HEAD",
     "LINE",
     "Ring",
     "address_or_zero",
     "aligned_bytes",
     "data_address",
-    "data_word",
     "odd_lines",
     "real_factors",
     "split_factors",
@@ -83,19 +83,15 @@ def real_factors(points, dtype):
     return memory
 
 
-# An array object keeps the address of its data behind the head that all objects have: that is part
-# of NumPy's binary interface. Attributes that tell it build an object on each call, which a push
-# of a few thousand samples would feel, so compiled code reads it there.
-_HEAD = object.__basicsize__
-
-
-def data_word(array):
-    """The address of the word that holds the address of an array's data."""
-    return id(array) + _HEAD
+# An array object, at the address id(array), keeps the address of its data behind the head that all
+# objects have: that is part of NumPy's binary interface. Attributes that tell it build an object on
+# each call, which a push of a few thousand samples would feel, so compiled code reads the word at
+# id(array) + HEAD.
+HEAD = object.__basicsize__
 
 
 def data_address(array):
-    return ctypes.c_size_t.from_address(data_word(array)).value
+    return ctypes.c_size_t.from_address(id(array) + HEAD).value
 
 
 _probe = np.zeros(4)[1:]

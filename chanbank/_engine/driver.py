@@ -294,7 +294,7 @@ def analysis_run(lane, real, step, radix):
 
         `table` holds the addresses of the ring's rows (see `Ring`); the operands from `code` on
         are those of `_stage` and `_deliver`, but that their addresses come as a word that holds
-        an address (see `data_word`) and bytes to add.
+        an address (see `HEAD` in buffers) and bytes to add.
         """
         variant = make_variant(lane, real, step, radix)
         bank = _bank_at(bank_address)

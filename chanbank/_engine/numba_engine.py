@@ -5,11 +5,11 @@ import math
 import numpy as np
 
 from chanbank._engine.buffers import (
+    HEAD,
     LINE,
     Ring,
     address_or_zero,
     aligned_bytes,
-    data_word,
     odd_lines,
     real_factors,
     split_factors,
@@ -116,6 +116,7 @@ class NumbaAnalysisEngine:
     def _run(self, worker, ring, form, origin, samples_offset, out, out_offset, part):
         """One compiled call: samples and frames `part`, some bytes into the push's arrays."""
         code, given, samples, zero, scale = form
+        begin, end, first, last = part
         frame_stride, column_stride = out.strides[-2:]
         if self.channel_major:
             frame_stride, column_stride = column_stride, frame_stride
@@ -124,17 +125,20 @@ class NumbaAnalysisEngine:
             ring.address,
             code,
             given,
-            data_word(samples),
+            id(samples) + HEAD,
             samples_offset,
             origin,
             zero,
             scale,
-            data_word(out),
+            id(out) + HEAD,
             out_offset,
             frame_stride,
             column_stride,
             out.nbytes >= STREAM_BYTES and out.flags.aligned,
-            *part,
+            begin,
+            end,
+            first,
+            last,
         )
 
     def _deal(self, form, origin, out, part):

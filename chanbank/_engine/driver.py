@@ -49,7 +49,8 @@ def record(text, **special):
 # A bank: its geometry, its buffers' addresses, its plan.
 #   cycle: frames after which positions are whole rows apart; step: how many rows then
 #   block, slot, gather: frames folded, transformed and (at most) delivered at a time
-#   held: numbers per sample in the ring
+#   tile: bytes of a row folded for all of a block's frames before going on; together: frames of one
+#   residue folded before those of the next; held: numbers per sample in the ring
 #   turned: rows in frame phase (0: none needed); columns: the bytes from the start of a frame's
 #   bins to each chosen DFT point (0: all); strip: a few channels' rows of `gather` frames
 #   piece_stride, factors: of DFTs that are split (both in rows of that stride)
@@ -57,9 +58,9 @@ def record(text, **special):
 #   row, and the last pass's factors
 #   mix, hop: the turn per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 ANALYSIS = record(
-    "channels hop rows cycle step ring_rows block gather slot held rotate channel_major"
-    " column_count columns taps tap_stride folded folded_stride turned bins bins_stride"
-    " strip strip_stride piece_stride factors halves line real_factors execute plan"
+    "channels hop rows cycle step ring_rows block tile together gather slot held rotate"
+    " channel_major column_count columns taps tap_stride folded folded_stride turned bins"
+    " bins_stride strip strip_stride piece_stride factors halves line real_factors execute plan"
     " mix_table mix_high mix_low hop_high hop_low",
     mix_high=np.uint64,
     mix_low=np.uint64,

@@ -20,18 +20,10 @@ from chanbank._engine.lanes import INDEX, VECTOR_BYTES, Lanes, lane_bytes, piece
 from chanbank._engine.move import fetch_lines
 from chanbank._engine.radix import split_pieces
 
-__all__ = ["fold_block", "fold_rows", "tile_columns"]
+__all__ = ["fold_block", "fold_rows"]
 
 # Taps held in registers at a time: 8 of 32 registers, or 4 of 16 on narrower machines.
 _CHUNKS = (8, 4, 2, 1) if VECTOR_BYTES == 64 else (4, 2, 1)
-
-# Bytes of a row folded for all frames before going on. A row serves up to P frames of every
-# residue: the parts of a block's rows, some tens of them, and their taps stay in the first-level
-# cache. Rows of long DFTs come from the third level or from memory, which deliver long runs best.
-_TILE_BYTES, _LONG_TILE_BYTES = 1 << 9, 1 << 13
-
-# Rows whose parts in a tile, with the taps, leave room in the smallest first-level caches.
-_NEAR_ROWS = 32
 
 
 @intrinsic(prefer_literal=True)
@@ -143,12 +135,6 @@ def fold_rows(variant, rows, taps, out, frames, vectors):
 
 
 @kernel
-def tile_columns(variant, sample_bytes):
-    """Columns folded for all frames before going on."""
-    return (_LONG_TILE_BYTES if pieces_of(variant) > 1 else _TILE_BYTES) // sample_bytes
-
-
-@kernel
 def fold_block(variant, bank, table, first, count, ahead):
     """Fold frames first .. first + count - 1, those that are whole rows apart together.
 
@@ -161,7 +147,7 @@ def fold_block(variant, bank, table, first, count, ahead):
     pieces = pieces_of(variant)
     length = bank.channels // pieces
     shared = count > bank.cycle or pieces > 1  # else each row is read once for all
-    tile = tile_columns(variant, sample_bytes) if shared else length
+    tile = bank.tile // sample_bytes if shared else length
     place_ahead, end_ahead = ahead
     for start in range(0, length, tile):
         stop = min(start + tile, length)
@@ -195,17 +181,16 @@ def _fold_tile(variant, bank, table, first, count, start, stop, folded):
     row = newest // bank.channels
     split = newest - row * bank.channels + 1
     oldest = (row - bank.rows) % bank.ring_rows
-    together = max(8, (_NEAR_ROWS - bank.rows) // bank.step // 8 * 8)
-    for begin in range(0, count, together * bank.cycle):
+    for begin in range(0, count, bank.together * bank.cycle):
         for member in range(min(bank.cycle, count - begin)):
-            frames = min(together, -(-(count - begin - member) // bank.cycle))
+            frames = min(bank.together, -(-(count - begin - member) // bank.cycle))
             place = folded + (begin + member) * bank.folded_stride
             _fold_frames(variant, bank, table, (oldest, split), (start, stop), place, frames)
             split += bank.hop
             if split > bank.channels:
                 split -= bank.channels
                 oldest = oldest + 1 if oldest + 1 < bank.ring_rows else 0
-        oldest = (oldest + (together - 1) * bank.step) % bank.ring_rows
+        oldest = (oldest + (bank.together - 1) * bank.step) % bank.ring_rows
 
 
 @kernel

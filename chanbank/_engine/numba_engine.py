@@ -24,9 +24,11 @@ from chanbank._engine.sizes import (
     STREAM_BYTES,
     WORKER_SAMPLES,
     block_frames,
+    frames_together,
     gather_frames,
     slot_frames,
     split_radix,
+    tile_bytes,
 )
 from chanbank._engine.stage import FORMATS, ZEROS
 from chanbank._engine.threads import Crew
@@ -231,6 +233,8 @@ class _Layout:
         self.slot = slot_frames(channels)
         frames = block_frames(self.row_bytes, self.cycle, self.rows)
         self.block = max(self.slot, frames // self.slot * self.slot)
+        self.tile = tile_bytes(self.rows, self.step, self.radix)
+        self.together = frames_together(self.rows, self.step, min(self.tile, self.row_bytes))
         self.gather = self.slot
         if spec.channel_major:
             self.gather = gather_frames(self.row_bytes, self.block)
@@ -294,6 +298,8 @@ class _Worker:
             "step": layout.step,
             "ring_rows": layout.ring_rows,
             "block": layout.block,
+            "tile": layout.tile,
+            "together": layout.together,
             "gather": layout.gather,
             "slot": layout.slot,
             "held": layout.held,

@@ -24,6 +24,7 @@ from chanbank._engine.sizes import (
     gather_frames,
     slot_frames,
     split_radix,
+    tile_bytes,
 )
 from chanbank._engine.threads import Crew
 from chanbank._engine.unfold import SYNTHESIS, synthesis_run
@@ -181,6 +182,7 @@ class _Layout:
         if spec.channel_major:
             frames = max(frames, gather_frames(self.row_bytes, 1) // 2)
         self.block = max(self.slot, frames // self.slot * self.slot)
+        self.tile = tile_bytes(self.reach, self.cycle, self.radix)
         self.gather = self.block if spec.channel_major else self.slot
         self.ring_rows = self.reach + self.block + self.slot
         self.plan = make_plan(
@@ -228,6 +230,7 @@ class _Worker:
             "cycle": layout.cycle,
             "ring_rows": layout.ring_rows,
             "block": layout.block,
+            "tile": layout.tile,
             "gather": layout.gather,
             "slot": layout.slot,
             "held": layout.held,

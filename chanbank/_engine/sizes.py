@@ -4,9 +4,11 @@ __all__ = [
     "STREAM_BYTES",
     "WORKER_SAMPLES",
     "block_frames",
+    "frames_together",
     "gather_frames",
     "slot_frames",
     "split_radix",
+    "tile_bytes",
 ]
 
 # Samples per execution of the DFT plan, where frames are short: the stores of one slot drain while
@@ -19,6 +21,13 @@ STREAM_BYTES = 1 << 25
 
 # DFTs on rows of this size gain by being split.
 _SPLIT_BYTES = 1 << 16
+
+# Bytes of rows that stay in any first-level cache, beside taps and sums, while eight or more frames
+# are folded from them.
+_NEAR_BYTES = 16 << 10
+
+# Rows of long DFTs come from the third level or from memory, which deliver long runs best.
+_LONG_TILE_BYTES = 1 << 13
 
 # Samples that are worth waking another worker for.
 WORKER_SAMPLES = 1 << 16
@@ -49,6 +58,22 @@ def block_frames(row_bytes, cycle, rows):
         return max(1, small)
     sharing = min(8, max(4, rows // 2))
     return max(1, small, min(8 * cycle, max(sharing * cycle, large), limit))
+
+
+def tile_bytes(rows, step, radix):
+    """Bytes of a row folded for all frames of a block before going on.
+
+    `rows` go into one frame, and frames that share rows lie `step` of them apart.
+    """
+    if radix > 1:
+        return _LONG_TILE_BYTES
+    lines = _NEAR_BYTES // (rows + 7 * step) // 64
+    return 64 * max(8, lines)
+
+
+def frames_together(rows, step, part):
+    """Frames of one residue folded before those of the next, in parts of rows of so many bytes."""
+    return max(8, (_NEAR_BYTES // part - rows) // step // 8 * 8)
 
 
 def gather_frames(row_bytes, block):

@@ -18,7 +18,7 @@ from numba.extending import intrinsic
 
 from chanbank._engine.compiling import compiled, kernel
 from chanbank._engine.driver import execute_plan, record, source_digest
-from chanbank._engine.fold import fold_rows, tile_columns
+from chanbank._engine.fold import fold_rows
 from chanbank._engine.lanes import (
     VECTOR_BYTES,
     address_as_pointer,
@@ -37,14 +37,15 @@ __all__ = ["SYNTHESIS", "synthesis_run"]
 
 # A bank: its geometry, its buffers' addresses, its plan.
 #   rows: J; cycle: hops after which columns repeat; block, gather, slot: frames unfolded, taken in
-#   and transformed at a time; held: numbers per sample in the ring
+#   and transformed at a time; tile: bytes of a row summed for all of a block's frames before going
+#   on; held: numbers per sample in the ring
 #   columns: the bytes from the start of a given row to each of the frame's DFT points (0: all)
 #   weights: a factor for each place of a given row (0: none)
 #   given, made: rows before and behind the DFT; summed: samples before they are delivered
 #   piece_stride, factors: of DFTs that are split (both in rows of that stride)
 #   mix, hop: the turn back per sample and per hop in units of 2**-128; mix_table: 0 to mix nothing
 SYNTHESIS = record(
-    "channels hop rows cycle ring_rows block gather slot held rotate channel_major real_part"
+    "channels hop rows cycle ring_rows block tile gather slot held rotate channel_major real_part"
     " delay column_count columns weights taps tap_stride given given_stride made made_stride"
     " row_stride summed summed_stride piece_stride factors execute plan"
     " mix_table mix_high mix_low hop_high hop_low",
@@ -194,7 +195,7 @@ def _unfold(variant, bank, table, first, count):
     """
     sample_bytes = bank.held * lane_bytes(variant)
     per_vector = VECTOR_BYTES // sample_bytes
-    tile = tile_columns(variant, sample_bytes)
+    tile = bank.tile // sample_bytes
     stride = bank.cycle * bank.summed_stride
     for start in range(0, bank.hop, tile):
         for member in range(min(bank.cycle, count)):

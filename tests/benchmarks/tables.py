@@ -6,8 +6,6 @@ python tests/benchmarks/tables.py FILE
 import json
 import sys
 
-_MIDDLE = (256, 1024, 4096)
-
 
 def _print(head, rows):
     print("| " + " | ".join(head) + " |", "|---" * len(head) + "|", sep="\n")
@@ -44,8 +42,9 @@ def bank_table(results):
 
 
 def other_table(results):
-    """The other routes, formats and directions at hop M, for the middle sizes."""
+    """The other routes, formats and directions at hop M, for the sizes that have them."""
     routes = {(row["M"], row["route"]): row["times the bank"] for row in results["plain"]}
+    sizes = sorted({row["M"] for row in results["formats"]})
     formats = {(row["M"], row["what"]): row["ratio"]["best"] for row in results["formats"]}
     whole = {row["M"]: row["ratio"]["best"] for row in results["synthesis"] if row["hop"] == "M"}
     pushes = {
@@ -53,21 +52,21 @@ def other_table(results):
     }
 
     def cells(name, pick, form=".2f"):
-        values = (pick(size) for size in _MIDDLE)
+        values = (pick(size) for size in sizes)
         return [name, *("" if value is None else f"{value:{form}}" for value in values)]
 
     slower = ": times slower"
     _print(
-        ["against, in the same run (hop M)", "M = 256", "1024", "4096"],
+        ["against, in the same run (hop M)", f"M = {sizes[0]}", *map(str, sizes[1:])],
         [
             cells(
                 "`einsum` over a strided view, then `scipy.fft.fft`" + slower,
-                lambda size: routes[size, "einsum + scipy.fft"],
+                lambda size: routes.get((size, "einsum + scipy.fft")),
                 ".1f",
             ),
             cells(
                 "this library's NumPy engine" + slower,
-                lambda size: routes[size, "numpy engine"],
+                lambda size: routes.get((size, "numpy engine")),
                 ".1f",
             ),
             cells(

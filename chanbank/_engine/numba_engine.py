@@ -46,7 +46,7 @@ class NumbaAnalysisEngine:
         self.run = analysis_run(layout.lane, not layout.paired, step, layout.radix)
         self.forms = _forms(spec.real)
         self.alone = spec.workers < 2
-        self.channel_major = spec.channel_major
+        self.hop, self.channel_major = spec.hop, spec.channel_major
         self.crew = Crew(lambda: _Worker(layout), max(1, spec.workers))
         self.reset(0, 1)
 
@@ -106,7 +106,7 @@ class NumbaAnalysisEngine:
             rest[...] = 0
 
     def _push(self, form, count, out):
-        origin, hop = self.position, self.spec.hop
+        origin, hop = self.position, self.hop
         end = origin + count
         part = (origin, end, -(-origin // hop), -(-end // hop))
         if len(self.rings) == 1 and (self.alone or count < 2 * WORKER_SAMPLES):

@@ -12,7 +12,8 @@ __all__ = [
 ]
 
 # Samples per execution of the DFT plan, where frames are short: the stores of one slot drain while
-# the next is computed, and a small push completes whole slots.
+# the next is computed, the two bursts around it fetch as many samples (see `fetch_lines`), and a
+# small push completes whole slots.
 _SLOT_SAMPLES = 1 << 9
 
 # Results of this many bytes are written past the caches; smaller ones may still be in them when

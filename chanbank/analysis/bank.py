@@ -303,6 +303,7 @@ class AnalysisBank(Bank):
         >>> [len(bank.push(np.ones(n, "float32"))) for n in (1, 3, 4)], len(bank.finish())
         ([1, 0, 1], 2)
         """
+        # A push of a few thousand samples takes some microseconds, and feels every call in vain.
         if self._finished:
             self._refuse_finished()
         samples, count, lead, scaling = self._checked_samples(samples)

@@ -19,13 +19,11 @@ from chanbank._checks import (
 from chanbank._engine import AnalysisSpec, make_analysis_engine
 from chanbank.analysis.arrays import bank_dtype, checked_out, flat_leading
 from chanbank.analysis.base import Bank, same_channels
+from chanbank.analysis.samples import SampleDoor
 from chanbank.plan import ChannelPlan
 from chanbank.prototype.prototype import Prototype
 
 __all__ = ["AnalysisBank"]
-
-_INTEGER_ZERO = {"int8": 0, "int16": 0, "uint8": 128}
-_INTEGER_SCALE = {"int8": 128, "int16": 32768, "uint8": 128}
 
 _SAMPLES = OwnCheck(
     "an array (..., samples) that the bank's dtype can hold", ("text", TypeError), (3, ValueError)
@@ -185,18 +183,7 @@ class AnalysisBank(Bank):
         self._engine = make_analysis_engine(self._spec)
         self._whole = None
         self._columns = self._spec.column_count
-        # Looked up at every push, so kept by dtype: the floats that need no conversion, and the
-        # zero level and scale of integers.
-        self._floats = {
-            np.dtype(name)
-            for name in ("float32", "float64", "complex64", "complex128")
-            if (name[0] == "f" or not plan.real)
-            and (name in ("float32", "complex64") or self._spec.dtype == np.complex128)
-        }
-        self._integers = {
-            np.dtype(name): (float(_INTEGER_ZERO[name]), 1.0 / (held["full_scale"] or full))
-            for name, full in _INTEGER_SCALE.items()
-        }
+        self._door = SampleDoor(self._spec.dtype, plan.real, held["full_scale"])
 
     @property
     def select(self):
@@ -257,7 +244,7 @@ class AnalysisBank(Bank):
         --------
         See the class.
         """
-        samples, count, lead, scaling = self._checked_samples(samples)
+        samples, count, lead, scaling = self._door.take(samples)
         total = count + self.prototype.length - 1
         shape = self._shape(lead, -(-total // self.plan.hop))
         out = checked_out(out, shape, self.dtype)
@@ -306,7 +293,7 @@ class AnalysisBank(Bank):
         # A push of a few thousand samples takes some microseconds, and feels every call in vain.
         if self._finished:
             self._refuse_finished()
-        samples, count, lead, scaling = self._checked_samples(samples)
+        samples, count, lead, scaling = self._door.take(samples)
         if lead != self._lead:
             self._refuse_other_lead("samples", lead)
         out = checked_out(out, self._shape(lead, self._frames_for(count)), self._spec.dtype)
@@ -497,56 +484,6 @@ class AnalysisBank(Bank):
         if samples.ndim > 1:
             samples, out = flat_leading(samples, 1), flat_leading(out, 2)
         engine.push(samples, out, *scaling)
-
-    def _checked_samples(self, samples):
-        """The samples as the engine takes them, how many, their leading axes, and their scaling.
-
-        The scaling is () for floats and (zero level, scale) for integers.
-        """
-        array = samples if type(samples) is np.ndarray else np.asarray(samples)
-        kind, shape = array.dtype, array.shape
-        if kind in self._floats and shape and array.flags.c_contiguous:
-            return array, shape[-1], shape[:-1], ()
-        if array.ndim == 0 and kind.kind in "iufc":
-            raise wrong_value("samples", "an array whose last axis is time", samples)
-        if kind not in self._floats:
-            if kind in self._integers:
-                if not self.plan.real and array.shape[-1] % 2:
-                    raise ValueError(
-                        f"samples of dtype {kind.name} must be interleaved I/Q for a complex plan, "
-                        f"an even number along the last axis; got shape {array.shape}"
-                    )
-            else:
-                self._check_float(array)
-                wider = kind.newbyteorder("=")
-                array = array.astype("float32" if wider == np.float16 else wider)
-        if not array.flags.c_contiguous:
-            array = np.ascontiguousarray(array)
-        count, scaling = array.shape[-1], self._integers.get(array.dtype, ())
-        if scaling and not self._spec.real:
-            count //= 2
-        return array, count, array.shape[:-1], scaling
-
-    def _check_float(self, array):
-        kind, name = array.dtype.kind, array.dtype.name
-        if kind not in "fc":
-            raise wrong_type(
-                "samples", "complex or real floats, or int8, uint8 or int16 integers", array
-            )
-        if kind == "c" and self.plan.real:
-            raise wrong_type("samples", "real, since plan.real is True", array)
-        needs = np.result_type(array.dtype, np.complex64)
-        if needs.itemsize > self.dtype.itemsize:
-            way = (
-                f'dtype="{needs.name}" for the bank'
-                if needs == np.complex128
-                else "samples of complex128 or lower precision"
-            )
-            lower = "complex64" if kind == "c" else "float32"
-            raise TypeError(
-                f"samples must not be of higher precision than the bank's {self.dtype.name}; got "
-                f"{name}. Ask for {way}, or pass samples.astype({lower!r})"
-            )
 
 
 def _checked_select(select, count):

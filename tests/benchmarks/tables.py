@@ -51,42 +51,28 @@ def other_table(results):
         row["M"]: row["ratio"]["best"] for row in results["small_pushes"] if row["hop"] == "M"
     }
 
-    def cells(name, pick, form=".2f"):
-        values = (pick(size) for size in sizes)
+    def cells(name, found, key=None, form=".2f"):
+        """A row of `found`, by size, or by size and a key."""
+        values = (found.get(size if key is None else (size, key)) for size in sizes)
         return [name, *("" if value is None else f"{value:{form}}" for value in values)]
 
-    slower = ": times slower"
+    def slower(name, route, form=".1f"):
+        return cells(f"{name}: times slower", routes, route, form)
+
+    window = "`scipy.signal.ShortTimeFFT`, same window"
+    mixers = "a mixer and `upfirdn` per channel, all channels"
     _print(
         ["against, in the same run (hop M)", f"M = {sizes[0]}", *map(str, sizes[1:])],
         [
-            cells(
-                "`einsum` over a strided view, then `scipy.fft.fft`" + slower,
-                lambda size: routes.get((size, "einsum + scipy.fft")),
-                ".1f",
-            ),
-            cells(
-                "this library's NumPy engine" + slower,
-                lambda size: routes.get((size, "numpy engine")),
-                ".1f",
-            ),
-            cells(
-                "`scipy.signal.ShortTimeFFT`, same window" + slower,
-                lambda size: routes.get((size, "ShortTimeFFT")),
-                ".0f",
-            ),
-            cells(
-                "a mixer and `upfirdn` per channel, all channels" + slower,
-                lambda size: routes.get((size, "mixer + upfirdn")),
-                ",.0f",
-            ),
-            cells("int16 samples: time over complex64's", lambda size: formats[size, "int16"]),
-            cells(
-                "channel-major frames: time over frame-major",
-                lambda size: formats[size, "channel-major"],
-            ),
-            cells("two workers: time over one", lambda size: formats[size, "two workers"]),
-            cells("synthesis, ratio to the batched inverse DFT", whole.get),
-            cells("push of 4096 samples, ratio to its DFTs alone", pushes.get),
+            slower("`einsum` over a strided view, then `scipy.fft.fft`", "einsum + scipy.fft"),
+            slower("this library's NumPy engine", "numpy engine"),
+            slower(window, "ShortTimeFFT", ".0f"),
+            slower(mixers, "mixer + upfirdn", ",.0f"),
+            cells("int16 samples: time over complex64's", formats, "int16"),
+            cells("channel-major frames: time over frame-major", formats, "channel-major"),
+            cells("two workers: time over one", formats, "two workers"),
+            cells("synthesis, ratio to the batched inverse DFT", whole),
+            cells("push of 4096 samples, ratio to its DFTs alone", pushes),
         ],
     )
 
